@@ -1,0 +1,2 @@
+//! Controller.
+#![no_std]

@@ -1,0 +1,8 @@
+//! Ringvolt's host library: everything the `ringvolt` command does, apart from parsing its command line.
+//!
+//! Lower modules know nothing of higher ones; `DEVELOPERS.md` has the table and a test checks it.
+
+pub mod divider;
+pub mod metrology;
+pub mod physics;
+pub mod rings;

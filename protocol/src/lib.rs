@@ -1,0 +1,2 @@
+//! Messages and framing.
+#![no_std]
