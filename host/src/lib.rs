@@ -2,7 +2,10 @@
 //!
 //! Lower modules know nothing of higher ones; `DEVELOPERS.md` has the table and a test checks it.
 
+pub mod calibration;
 pub mod divider;
 pub mod metrology;
 pub mod physics;
+pub mod profile;
 pub mod rings;
+pub mod run;
