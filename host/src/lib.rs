@@ -3,6 +3,7 @@
 //! Lower modules know nothing of higher ones; `DEVELOPERS.md` has the table and a test checks it.
 
 pub mod calibration;
+pub mod cli;
 pub mod divider;
 pub mod metrology;
 pub mod physics;
