@@ -4,6 +4,7 @@
 
 pub mod calibration;
 pub mod cli;
+pub mod clock;
 pub mod divider;
 pub mod link;
 pub mod metrology;
