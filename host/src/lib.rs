@@ -6,6 +6,7 @@ pub mod calibration;
 pub mod cli;
 pub mod clock;
 pub mod divider;
+pub mod frames;
 pub mod link;
 pub mod metrology;
 pub mod physics;
