@@ -10,3 +10,4 @@ pub mod physics;
 pub mod profile;
 pub mod rings;
 pub mod run;
+pub mod text;
