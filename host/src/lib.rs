@@ -13,4 +13,6 @@ pub mod physics;
 pub mod profile;
 pub mod rings;
 pub mod run;
+pub mod session;
 pub mod stamp;
+pub mod text;
