@@ -14,7 +14,12 @@ fn root() -> PathBuf {
 fn table() -> BTreeMap<String, BTreeSet<String>> {
     let text = fs::read_to_string(root().join("DEVELOPERS.md")).unwrap();
     let body = text.split("<!-- layers:begin -->").nth(1).unwrap().split("<!-- layers:end -->").next().unwrap();
-    let words = |cell: &str| cell.split(['`', ',', ' ']).filter(|word| !word.is_empty() && *word != "-").map(str::to_owned).collect::<Vec<_>>();
+    let words = |cell: &str| {
+        cell.split(['`', ',', ' '])
+            .filter(|word| !word.is_empty() && *word != "-")
+            .map(str::to_owned)
+            .collect::<Vec<_>>()
+    };
     body.lines()
         .filter(|line| line.starts_with("| `"))
         .map(|line| {
@@ -41,7 +46,8 @@ fn sources(folder: &Path) -> Vec<PathBuf> {
 fn named(text: &str) -> BTreeSet<String> {
     let word = |text: &str| text.chars().take_while(|c| c.is_alphanumeric() || *c == '_').collect::<String>();
     let mut names = BTreeSet::new();
-    let code: String = text.lines().filter(|line| !line.trim_start().starts_with("//")).map(|line| format!("{line}\n")).collect();
+    let code: String =
+        text.lines().filter(|line| !line.trim_start().starts_with("//")).map(|line| format!("{line}\n")).collect();
     for rest in code.split("crate::").skip(1) {
         let Some(list) = rest.strip_prefix('{') else {
             names.insert(word(rest));
@@ -105,8 +111,21 @@ fn the_reader_of_imports_sees_what_is_there() {
 
 #[test]
 fn the_top_level_holds_what_it_should() {
-    let allowed = ["Cargo.toml", "Cargo.lock", "README.md", "DEVELOPERS.md", "firmware", "host", "protocol", "tests",
-        "hardware-notes", "LICENSE-MIT", "LICENSE-APACHE", "target", "demo"];
+    let allowed = [
+        "Cargo.toml",
+        "Cargo.lock",
+        "README.md",
+        "DEVELOPERS.md",
+        "firmware",
+        "host",
+        "protocol",
+        "tests",
+        "hardware-notes",
+        "LICENSE-MIT",
+        "LICENSE-APACHE",
+        "target",
+        "demo",
+    ];
     for entry in fs::read_dir(root()).unwrap() {
         let name = entry.unwrap().file_name().into_string().unwrap();
         assert!(name.starts_with('.') || allowed.contains(&name.as_str()), "{name} does not belong at the top level");

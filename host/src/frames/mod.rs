@@ -3,6 +3,7 @@
 mod exif;
 mod exposure;
 mod folder;
+pub mod lamp;
 mod picture;
 
 pub use exposure::{exposure_of, shutter_seconds};

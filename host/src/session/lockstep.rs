@@ -56,7 +56,8 @@ impl LockstepPace {
     /// # Errors
     /// One sentence.
     pub fn connect(address: &str) -> Result<Self, String> {
-        let failed = |why: String| format!("the clock tcp:{address} could not be reached ({why}): start the emulator first");
+        let failed =
+            |why: String| format!("the clock tcp:{address} could not be reached ({why}): start the emulator first");
         let stream = TcpStream::connect(address).map_err(|error| failed(error.to_string()))?;
         stream.set_nodelay(true).map_err(|error| failed(error.to_string()))?;
         stream.set_read_timeout(Some(PATIENCE)).map_err(|error| failed(error.to_string()))?;
@@ -93,7 +94,12 @@ impl Pace for LockstepPace {
         self.now.utc_ns
     }
 
-    fn wait(&mut self, link: Option<&mut dyn Endpoint>, until_ns: i64, received: &mut Vec<u8>) -> Result<(), LinkError> {
+    fn wait(
+        &mut self,
+        link: Option<&mut dyn Endpoint>,
+        until_ns: i64,
+        received: &mut Vec<u8>,
+    ) -> Result<(), LinkError> {
         match self.exchange(until_ns) {
             Ok(now) => self.now = now,
             Err(why) => {
@@ -112,7 +118,10 @@ impl Pace for LockstepPace {
             self.read += count as u64;
         }
         if self.now.gone {
-            return Err(LinkError::Lost { what: "to the emulated board".to_owned(), why: "it was unplugged".to_owned() });
+            return Err(LinkError::Lost {
+                what: "to the emulated board".to_owned(),
+                why: "it was unplugged".to_owned(),
+            });
         }
         Ok(())
     }

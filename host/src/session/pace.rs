@@ -19,7 +19,8 @@ pub trait Pace {
     ///
     /// # Errors
     /// [`LinkError::Lost`] when the link is gone.
-    fn wait(&mut self, link: Option<&mut dyn Endpoint>, until_ns: i64, received: &mut Vec<u8>) -> Result<(), LinkError>;
+    fn wait(&mut self, link: Option<&mut dyn Endpoint>, until_ns: i64, received: &mut Vec<u8>)
+    -> Result<(), LinkError>;
 
     /// A link was opened.
     fn opened(&mut self) {}
@@ -63,7 +64,12 @@ impl Pace for RealPace {
         self.clock.utc_ns()
     }
 
-    fn wait(&mut self, link: Option<&mut dyn Endpoint>, until_ns: i64, received: &mut Vec<u8>) -> Result<(), LinkError> {
+    fn wait(
+        &mut self,
+        link: Option<&mut dyn Endpoint>,
+        until_ns: i64,
+        received: &mut Vec<u8>,
+    ) -> Result<(), LinkError> {
         // A serial port waits in whole milliseconds, and zero would turn the loop without a rest.
         let left_ns = (until_ns - self.mono_ns()).clamp(1_000_000, LONGEST_NS);
         let patience = Duration::from_nanos(left_ns.unsigned_abs());

@@ -53,7 +53,8 @@ struct Line {
 impl Line {
     fn through(samples: &[Sample], index: usize) -> Self {
         let sample = &samples[index];
-        let neighbour = |other: Option<&Sample>| other.filter(|other| other.count > 0 && touches(sample, other)).copied();
+        let neighbour =
+            |other: Option<&Sample>| other.filter(|other| other.count > 0 && touches(sample, other)).copied();
         let before = neighbour(index.checked_sub(1).and_then(|before| samples.get(before))).unwrap_or(*sample);
         let after = neighbour(samples.get(index + 1)).unwrap_or(*sample);
         let apart = after.middle_ns() - before.middle_ns();

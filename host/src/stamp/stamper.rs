@@ -80,7 +80,12 @@ impl Stamper {
     }
 
     /// The stamp of one frame.
-    pub fn stamp<C: Calibration>(&self, frame: &FrameRow, evidence: &Evidence<'_>, calibration: Option<&C>) -> StampRow {
+    pub fn stamp<C: Calibration>(
+        &self,
+        frame: &FrameRow,
+        evidence: &Evidence<'_>,
+        calibration: Option<&C>,
+    ) -> StampRow {
         let Ok(exposure) = &frame.exposure else { return Self::refuse(frame, Reason::ExposureUnknown) };
         let Some(clock_u_ns) = evidence.clock_u_ns else { return Self::refuse(frame, Reason::NoTime) };
         let Some(calibration) = calibration else { return Self::refuse(frame, Reason::Uncalibrated) };
@@ -203,7 +208,8 @@ impl Stamper {
     fn judge_beam(&self, reasons: &mut Reasons, beam_na: &[i32]) {
         if let (Some(least), Some(most)) = (beam_na.iter().min(), beam_na.iter().max()) {
             let change = f64::from(*most) - f64::from(*least);
-            reasons.add_if(change > self.profile.limits.beam_mark_fraction * f64::from(*most).abs(), Reason::BeamChanged);
+            reasons
+                .add_if(change > self.profile.limits.beam_mark_fraction * f64::from(*most).abs(), Reason::BeamChanged);
         }
     }
 
@@ -253,12 +259,7 @@ impl Stamper {
 }
 
 fn row(frame: &FrameRow, reasons: &Reasons, value: Option<StampValue>) -> StampRow {
-    StampRow {
-        frame: frame.frame.clone(),
-        verdict: reasons.verdict().to_owned(),
-        reasons: reasons.to_string(),
-        value,
-    }
+    StampRow { frame: frame.frame.clone(), verdict: reasons.verdict().to_owned(), reasons: reasons.to_string(), value }
 }
 
 fn judge_flags(reasons: &mut Reasons, during: &[Sample]) {

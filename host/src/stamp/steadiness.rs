@@ -94,11 +94,8 @@ fn extremes(means: &[CycleMean], start_ns: i64, end_ns: i64) -> Option<(f64, f64
 }
 
 fn ripple(samples: &[Sample], block: usize, start_ns: i64, end_ns: i64) -> f64 {
-    let during: Vec<Sample> = samples
-        .iter()
-        .filter(|sample| sample.count > 0 && sample.overlap_ns(start_ns, end_ns) > 0)
-        .copied()
-        .collect();
+    let during: Vec<Sample> =
+        samples.iter().filter(|sample| sample.count > 0 && sample.overlap_ns(start_ns, end_ns) > 0).copied().collect();
     let spread = |cycle: &[Sample]| {
         let lowest = cycle.iter().fold(f64::INFINITY, |lowest, sample| lowest.min(sample.lowest));
         let highest = cycle.iter().fold(f64::NEG_INFINITY, |highest, sample| highest.max(sample.highest));
@@ -111,7 +108,8 @@ fn ripple(samples: &[Sample], block: usize, start_ns: i64, end_ns: i64) -> f64 {
 fn scatter(means: &[CycleMean], block: usize) -> Option<f64> {
     // Cycle means overlap; every `block`-th one does not.
     let apart: Vec<f64> = means.iter().step_by(block).map(|mean| mean.volts).collect();
-    let mut differences: Vec<f64> = apart.windows(3).map(|three| (three[0] - 2.0 * three[1] + three[2]).abs()).collect();
+    let mut differences: Vec<f64> =
+        apart.windows(3).map(|three| (three[0] - 2.0 * three[1] + three[2]).abs()).collect();
     if differences.len() < LEAST_DIFFERENCES {
         return None;
     }
