@@ -11,6 +11,7 @@ pub mod link;
 pub mod metrology;
 pub mod physics;
 pub mod profile;
+pub mod reduction;
 pub mod rings;
 pub mod run;
 pub mod session;
