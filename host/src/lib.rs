@@ -5,6 +5,7 @@
 pub mod calibration;
 pub mod cli;
 pub mod divider;
+pub mod instrument;
 pub mod metrology;
 pub mod physics;
 pub mod profile;

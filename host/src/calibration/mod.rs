@@ -4,11 +4,15 @@ mod apply;
 mod certificate;
 mod check;
 mod example;
+mod plan;
 mod seal;
+mod settling;
 #[cfg(test)]
 mod tests;
 
 pub use apply::{Channel, Outside, RecordError, UncertaintyPart, Validity, combined_volts, day_of_utc_ns};
 pub use certificate::{Certificate, ChannelFit, Conditions, Point, Reference, Stability};
 pub use example::example;
+pub use plan::{Direction, PlanError, Step, plan};
 pub use seal::{CertificateError, MAX_CERTIFICATE_BYTES};
+pub use settling::{Settling, SettlingRules, SettlingWatch};

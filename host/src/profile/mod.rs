@@ -13,6 +13,7 @@ mod tests;
 mod write;
 
 pub use field::{FIELDS, Field, Kind, Presence, TABLES};
+pub(crate) use parse::check_answer;
 pub use parse::{Fault, MAX_PROFILE_BYTES, ProfileError};
 pub use settings::SettingsError;
 pub use write::{commented, example, explain};
