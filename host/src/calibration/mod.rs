@@ -6,7 +6,9 @@ mod check;
 mod example;
 mod plan;
 mod seal;
+mod session;
 mod settling;
+mod source;
 #[cfg(test)]
 mod tests;
 
@@ -15,4 +17,6 @@ pub use certificate::{Certificate, ChannelFit, Conditions, Point, Reference, Sta
 pub use example::example;
 pub use plan::{Direction, PlanError, Step, plan};
 pub use seal::{CertificateError, MAX_CERTIFICATE_BYTES};
+pub use session::{Header, Outcome, Session, SessionError};
 pub use settling::{Settling, SettlingRules, SettlingWatch};
+pub use source::{CodeEvent, CodeSource, Codes, CsvSource, SourceError};
