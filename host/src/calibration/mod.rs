@@ -4,6 +4,7 @@ mod apply;
 mod certificate;
 mod check;
 mod example;
+mod least_squares;
 mod plan;
 mod seal;
 mod session;
