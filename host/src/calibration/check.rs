@@ -46,6 +46,13 @@ pub(super) fn day(text: &str) -> Option<i64> {
     (1970..2200).contains(&date.year()).then(|| i64::from((date - epoch).get_days()))
 }
 
+/// `YYYY-MM-DD` of days since 1970-01-01, from 1970 to 2199.
+pub(super) fn day_text(days: i64) -> Option<String> {
+    let days = i32::try_from(days).ok().filter(|days| (0..84_006).contains(days))?;
+    let date = jiff::civil::date(1970, 1, 1).checked_add(jiff::Span::new().days(days)).ok()?;
+    Some(date.to_string())
+}
+
 /// Checks everything but the hash's value.
 pub(super) fn check(certificate: &Certificate) -> Checked {
     identities(certificate)?;

@@ -1,23 +1,28 @@
 //! Certificates, the procedure that makes them, and the chart that watches over them.
 
 mod apply;
+mod assess;
 mod certificate;
 mod check;
 mod example;
 mod fit;
+mod issue;
 mod least_squares;
 mod plan;
 mod seal;
 mod session;
 mod settling;
 mod source;
+mod suspect;
 #[cfg(test)]
 mod tests;
 
 pub use apply::{Channel, Outside, RecordError, UncertaintyPart, Validity, combined_volts, day_of_utc_ns};
+pub use assess::{Assessment, Finding, Hysteresis, Severity, assess};
 pub use certificate::{Certificate, ChannelFit, Conditions, Point, Reference, Stability};
 pub use example::example;
 pub use fit::{FTest, FitError, FitReport, Residual, TemperatureTerm, fit};
+pub use issue::{IssueDetails, IssueError, issue};
 pub use plan::{Direction, PlanError, Step, plan};
 pub use seal::{CertificateError, MAX_CERTIFICATE_BYTES};
 pub use session::{Header, Outcome, Session, SessionError};
