@@ -135,6 +135,18 @@ pub fn fit(points: &[Point], channel: Channel, given: (f64, f64)) -> Result<FitR
     data.report(&used, outliers).ok_or(FitError::NoSlope(data.name()))
 }
 
+/// The bend and its standard uncertainty whether it was kept or not, volts per code squared: for tests of the procedure.
+#[cfg(test)]
+pub(super) fn bend_of(points: &[Point], channel: Channel) -> Option<(f64, f64)> {
+    let mut data = Data::new(points, channel, (0.0, 0.0));
+    let all: Vec<usize> = (0..points.len()).collect();
+    let outliers = data.outliers(&all);
+    let used: Vec<usize> = all.into_iter().filter(|index| !outliers.contains(index)).collect();
+    let solution = data.solve(&used, 2)?;
+    let unit = data.scale * data.scale;
+    Some((solution.coefficients[2] / unit, libm::sqrt(solution.cofactors[2][2] * solution.unit_variance()) / unit))
+}
+
 struct Data<'a> {
     points: &'a [Point],
     channel: Channel,
@@ -285,8 +297,9 @@ impl<'a> Data<'a> {
         for i in 0..terms {
             fit.coefficients[i] = solution.coefficients[i] * unit[i];
             for j in 0..terms {
-                fit.covariance[i][j] =
-                    0.5 * (solution.cofactors[i][j] + solution.cofactors[j][i]) * variance * unit[i] * unit[j];
+                // In this order the matrix is symmetric to the last bit.
+                let cofactor = 0.5 * (solution.cofactors[i][j] + solution.cofactors[j][i]);
+                fit.covariance[i][j] = cofactor * variance * (unit[i] * unit[j]);
             }
         }
         let sigma = |at: usize| self.sigmas[used[at]];
