@@ -3,13 +3,16 @@
 mod apply;
 mod assess;
 mod certificate;
+pub mod chart;
 mod check;
 mod example;
 mod fit;
 mod guide;
+mod html;
 mod issue;
 mod least_squares;
 mod plan;
+pub mod plot;
 mod reference;
 mod seal;
 mod session;
@@ -25,6 +28,7 @@ pub use certificate::{Certificate, ChannelFit, Conditions, Point, Reference, Sta
 pub use example::example;
 pub use fit::{FTest, FitError, FitReport, Residual, TemperatureTerm, fit};
 pub use guide::{End, Guide, GuideError, Talk};
+pub use html::certificate_page;
 pub use issue::{IssueDetails, IssueError, issue};
 pub use plan::{Direction, PlanError, Step, plan};
 pub use reference::{Answer, Metered, ReferenceSource, Typed, parse_typed_volts};
