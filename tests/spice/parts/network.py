@@ -38,7 +38,8 @@ def parts(net, protection, negative):
     made += [
         # To the star, not to the pedestal: the charge of a flashover would be pushed into the low pin.
         Part("CF", "tap", "0", value("filter_farads")),
-        Part("XGDT", "tap", "0", "{a} {b} gdt"),
+        Part("XGDTA", "tap", "0", "{a} {b} gdt"),
+        Part("XGDTB", "tap", "0", "{a} {b} gdt"),
         Part("RS1A", "tap", "mid1", f"{{a}} {{b}} {p['series_ohms'][0]:g}"),
         Part("RS1B", "mid1", "clamp", f"{{a}} {{b}} {p['series_ohms'][1]:g}"),
         Part("DUP", "clamp", "vr", diode),
