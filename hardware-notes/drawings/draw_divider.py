@@ -1,6 +1,5 @@
 """The divider and its protective network, part by part, with the names of tests/spice."""
 
-import schemdraw
 import schemdraw.elements as elm
 
 from sheet import drawing
