@@ -26,7 +26,7 @@ def _value(permit, key):
 
 
 def _netlist(permit, hertz, stuck, fault, title):
-    """`stuck`: None for the wave all along, else the level at which the line stands after STOP_AT (0 Hz: from the start)."""
+    """`fault` is (part, how), or (part+part, how). `stuck`: None for the wave all along, else the level at which the line stands after STOP_AT (0 Hz: from the start)."""
     high = permit["gate_volts"]
     if hertz:
         lines = [f"VWAVE wave 0 PULSE(0 {high:g} 0 1u 1u {0.5 / hertz - 1e-6:.9g} {1 / hertz:.9g})"]
@@ -35,9 +35,10 @@ def _netlist(permit, hertz, stuck, fault, title):
     else:
         lines = [f"VOPTO opto 0 {high * stuck:g}"]
     for name, a, b, key in PARTS:
-        if fault == (name, "open"):
+        struck = fault[1] if name in (fault[0] or "").split("+") else None
+        if struck == "open":
             lines.append(f"RX{name} {a} {b} 1e12")
-        elif fault == (name, "shorted"):
+        elif struck == "shorted":
             lines.append(f"RX{name} {a} {b} 0.1")
         else:
             lines.append(f"{name} {a} {b} " + ("rectifier" if key is None else f"{_value(permit, key):g}"))
