@@ -6,9 +6,9 @@ from sheet import drawing
 
 TITLE = "Divider and protective network"
 DESCRIPTION = (
-    "High voltage at the upper left runs down a string of ten resistors, RH1 to RH10, to the tap. From the tap, capacitor CF and two gas "
+    "High voltage at the upper left runs down a string of ten resistors, RH1 to RH10, and a foot resistor RT to the tap. From the tap, capacitor CF and two gas "
     "discharge tubes go to the star point, two low-side resistors RLA and RLB in parallel go to the pedestal node, and two "
-    "resistors RS1A and RS1B lead to a pair of low-leakage clamp diodes, then RS2A, RS2B and a buffer lead to converter input "
+    "resistors RS1A and RS1B lead to a pair of low-leakage clamp diodes with a capacitor CCL, then RS2A, RS2B and a buffer lead to converter input "
     "AIN0. The pedestal node leads to AIN1. Below, a shunt reference makes the clamp rail and the pedestal voltage."
 )
 
@@ -22,15 +22,16 @@ def rail(d, x, y, name):
 
 
 def string_and_tap(d):
-    d += elm.Rect(corner1=(-4.6, 13.6), corner2=(6.6, 5.2), fill="#fdeeea", color="#f3c9bd").at((0, 0))
+    d += elm.Rect(corner1=(-4.6, 13.6), corner2=(6.6, 5.1), fill="#fdeeea", color="#f3c9bd").at((0, 0))
     d += elm.Label(color="#b03000").at((-4.3, 13.0)).label("HIGH VOLTAGE", halign="left")
     d += elm.Dot(open=True).at((0, 13)).label("from the tube pin (earthing.svg)", loc="right")
     d += elm.Resistor().at((0, 13)).to((0, 11)).label("RH1", loc="top")
-    d += elm.Resistor().at((0, 11)).to((0, 9)).label("RH2", loc="top")
-    d += elm.Line(ls=":").at((0, 9)).to((0, 7.4))
-    d += elm.Resistor().at((0, 7.4)).to((0, 5.4)).label("RH10", loc="top")
-    d += elm.Line().at((0, 5.4)).to((0, 4))
-    d += elm.Label().at((0.9, 9.6)).label("10 × 20 MΩ, each\nrated 3.5 kV or more,\nin one row: no fold\nbrings the hot end\nnear the tap", halign="left")
+    d += elm.Resistor().at((0, 11)).to((0, 9.2)).label("RH2", loc="top")
+    d += elm.Line(ls=":").at((0, 9.2)).to((0, 8.4))
+    d += elm.Resistor().at((0, 8.4)).to((0, 6.6)).label("RH10", loc="top")
+    d += elm.Resistor().at((0, 6.6)).to((0, 5.2)).label("RT  1 kΩ", loc="top")
+    d += elm.Line().at((0, 5.2)).to((0, 4))
+    d += elm.Label().at((0.9, 10.2)).label("10 × 20 MΩ, each\nrated 3.5 kV or more,\nin one row: no fold\nbrings the hot end\nnear the tap", halign="left")
     d += elm.Line(ls="--", color="#b03000").at((-4.6, 4.95)).to((6.6, 4.95))
     d += elm.Label(color="#b03000").at((6.9, 5.55)).label("earthed guard and slot", halign="left", valign="center")
     d += elm.Dot().at((0, 4)).label("tap", loc="left")
@@ -59,15 +60,19 @@ def sense_path(d):
     d += elm.Label().at((15.1, 6.3)).label("VR", halign="left")
     d += elm.Diode().at((14.6, 2.0)).to((14.6, 4)).label("DDN", loc="bottom")
     star(d, 14.6, 2.0)
-    d += elm.Resistor().at((14.6, 4)).to((17.2, 4)).label("RS2A\n5 kΩ")
-    d += elm.Resistor().at((17.2, 4)).to((19.8, 4)).label("RS2B\n5 kΩ")
-    d += elm.Dot().at((19.8, 4))
-    d += elm.Resistor().at((19.8, 4)).to((19.8, 1.6)).label("RPD\n100 MΩ", loc="bottom")
-    star(d, 19.8, 1.6)
-    d += elm.Line().at((19.8, 4)).to((21.6, 4))
-    triangle(d, 21.6, 4, "×1")
-    d += elm.Resistor().at((23.4, 4)).to((26, 4)).label("RO1 100 Ω")
-    d += elm.Line().at((26, 4)).to((27, 4))
+    d += elm.Dot().at((16.2, 4))
+    d += elm.Line().at((14.6, 4)).to((16.2, 4))
+    d += elm.Capacitor().at((16.2, 4)).to((16.2, 2.0)).label("CCL\n470 pF", loc="bottom")
+    star(d, 16.2, 2.0)
+    d += elm.Resistor().at((16.2, 4)).to((18.6, 4)).label("RS2A\n5 kΩ")
+    d += elm.Resistor().at((18.6, 4)).to((21.0, 4)).label("RS2B\n5 kΩ")
+    d += elm.Dot().at((21.0, 4))
+    d += elm.Resistor().at((21.0, 4)).to((21.0, 1.6)).label("RPD\n100 MΩ", loc="bottom")
+    star(d, 21.0, 1.6)
+    d += elm.Line().at((21.0, 4)).to((22.6, 4))
+    triangle(d, 22.6, 4, "×1")
+    d += elm.Resistor().at((24.4, 4)).to((26.6, 4)).label("RO1 100 Ω")
+    d += elm.Line().at((26.6, 4)).to((27, 4))
 
 
 def triangle(d, x, y, text):
@@ -79,7 +84,7 @@ def triangle(d, x, y, text):
 
 def low_path(d):
     d += elm.Line().at((7.4, 0)).to((23.4, 0))
-    d += elm.Label().at((18.0, 0.32)).label("low: pedestal 0.1 V (positive HV) or 2.4 V (negative HV)", halign="center", fontsize=11)
+    d += elm.Label().at((17.7, 0.32)).label("low: pedestal 0.1 V (positive HV) or 2.4 V (negative HV)", halign="center", fontsize=11)
     d += elm.Dot().at((12.0, 0))
     d += elm.Diode().at((12.0, 0)).to((12.0, 1.7)).label("DUL", loc="bottom")
     rail(d, 12.0, 1.7, "")
@@ -129,8 +134,9 @@ def reference(d):
 
 NOTES = [
     "RLA and RLB are two: one open doubles the reading and puts no kilovolts on the tap.",
+    "RT slows a flashover to what the gas tubes can follow.",
     "GDTA and GDTB take a flashover; CF meets its steep front; both return to the star, not to AIN1.",
-    "RS1A and RS1B limit what is left to the clamp diodes DUP and DDN; in halves, since a shorted half leaves the other.",
+    "RS1A and RS1B limit what is left to the clamp DUP, DDN, CCL; in halves, since a shorted half leaves the other.",
     "RS2A and RS2B limit what reaches the buffer, whose output cannot leave its own supply.",
     "RPD empties the input when a series resistor opens: no plausible charge stays behind.",
     "The pedestal keeps a true zero and a wrong sign visible. Its own drift cancels in AIN0 − AIN1.",
@@ -140,7 +146,7 @@ NOTES = [
 
 def notes(d):
     for index, text in enumerate(NOTES):
-        d += elm.Label().at((7.6, 12.9 - 0.85 * index)).label("•  " + text, halign="left", valign="center")
+        d += elm.Label().at((7.6, 12.9 - 0.78 * index)).label("•  " + text, halign="left", valign="center")
 
 
 def main():

@@ -110,6 +110,14 @@ def outcome(description, net, fault, negative):
     )
 
 
+def harsher(description, changes):
+    """The description with the figures of one table of [harsher] put in."""
+    changed = {key: dict(value) if isinstance(value, dict) else value for key, value in description.items()}
+    for section, values in changes.items():
+        changed[section].update(values)
+    return changed
+
+
 def noticed(result, healthy, full_reading):
     """Who notices: told from the reading against the healthy one."""
     if result.fault == healthy.fault:

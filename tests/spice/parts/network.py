@@ -26,7 +26,7 @@ def parts(net, protection, negative):
     made = []
     for index in range(net["elements"]):
         above = "hv" if index == 0 else f"s{index}"
-        below = "tap" if index == net["elements"] - 1 else f"s{index + 1}"
+        below = "foot" if index == net["elements"] - 1 else f"s{index + 1}"
         made.append(Part(f"RH{index + 1}", above, below, f"{{a}} {{b}} {net['element_ohms']:g}"))
     for letter, ohms in zip("AB", net["low_ohms"]):
         made.append(Part(f"RL{letter}", "tap", "low", f"{{a}} {{b}} {ohms:g}"))
@@ -36,6 +36,7 @@ def parts(net, protection, negative):
         return f"{{a}} {{b}} {p[key]:g}"
 
     made += [
+        Part("RT", "foot", "tap", value("foot_ohms")),
         # To the star, not to the pedestal: the charge of a flashover would be pushed into the low pin.
         Part("CF", "tap", "0", value("filter_farads")),
         Part("XGDTA", "tap", "0", "{a} {b} gdt"),
@@ -44,6 +45,7 @@ def parts(net, protection, negative):
         Part("RS1B", "mid1", "clamp", f"{{a}} {{b}} {p['series_ohms'][1]:g}"),
         Part("DUP", "clamp", "vr", diode),
         Part("DDN", "0", "clamp", diode),
+        Part("CCL", "clamp", "0", value("clamp_farads")),
         Part("RS2A", "clamp", "mid2", f"{{a}} {{b}} {p['buffer_ohms'][0]:g}"),
         Part("RS2B", "mid2", "bin", f"{{a}} {{b}} {p['buffer_ohms'][1]:g}"),
         Part("RPD", "bin", "0", value("pulldown_ohms")),
@@ -124,10 +126,10 @@ def _source(supply, net, sign, fault, p):
         f".model arcs SW(vt=0.5 vh=0 ron={supply['arc_ohms']:g} roff=1e14)",
     ]
     if fault.flashover:
-        lines += ["SARC hv spark shorting 0 arcs", f"LARC spark tap {supply['lead_henries']:g}"]
+        lines += ["SARC hv spark shorting 0 arcs", f"LARC spark foot {supply['lead_henries']:g}"]
     if fault.standing:
         lines += [f".model smoulders SW(vt=0.5 vh=0 ron={_standing_ohms(supply, net, p):g} roff=1e14)",
-                  "SSTAND hv tap shorting 0 smoulders"]
+                  "SSTAND hv foot shorting 0 smoulders"]
     return lines
 
 
@@ -135,7 +137,7 @@ def _standing_ohms(supply, net, p):
     """A spark of just so high a resistance that the tap stands a little below what fires the gas tube."""
     volts = 0.95 * p["gdt_fire_volts"]
     amperes = volts * sum(1.0 / ohms for ohms in net["low_ohms"]) + (volts - p["reference_volts"]) / sum(p["series_ohms"])
-    return (supply["volts"] - volts) / amperes - supply["source_ohms"]
+    return (supply["volts"] - volts) / amperes - supply["source_ohms"] - p["foot_ohms"]
 
 
 def _parts(made, fault):
