@@ -18,15 +18,15 @@ def drawing(name, title, description, fontsize=12):
     d.config(unit=2, fontsize=fontsize, inches_per_unit=0.42, lw=1.6, font="DejaVu Sans, Verdana, sans-serif", margin=0.4)
     yield d
     text = d.get_imagedata("svg").decode()
-    (HERE / f"{name}.svg").write_text(dressed(text, title, description))
+    (HERE / f"{name}.svg").write_text(dressed(text, name, title, description))
 
 
-def dressed(text, title, description):
+def dressed(text, name, title, description):
     """Add title, description and a white background to an SVG text."""
     box = re.search(r'viewBox="([-\d.]+) ([-\d.]+) ([-\d.]+) ([-\d.]+)"', text)
     x, y, width, height = box.groups()
     head = re.search(r"<svg[^>]*>", text)
-    opening = head[0][:-1] + ' role="img" aria-labelledby="title description">'
-    extra = (f'<title id="title">{escape(title)}</title><desc id="description">{escape(description)}</desc>'
+    opening = head[0][:-1] + f' role="img" aria-labelledby="{name}-title {name}-description">'
+    extra = (f'<title id="{name}-title">{escape(title)}</title><desc id="{name}-description">{escape(description)}</desc>'
              f'<rect x="{x}" y="{y}" width="{width}" height="{height}" fill="white"/>')
     return text.replace(head[0], opening + "\n" + extra, 1).rstrip() + "\n"
