@@ -4,6 +4,10 @@
 //! around a time. A live session answers from memory, a run file from its tables; [`Reduction::stamp`] cannot tell the
 //! difference, so that a stamp made live and one made again from the file follow the same rules.
 
+mod recording;
+
+pub use recording::Recording;
+
 use ringvolt_protocol::{EventKind, Line, Polarity, Reading, Slow};
 use thiserror::Error;
 
@@ -171,8 +175,8 @@ fn covers_temperature(certificate: &Certificate, celsius: f64) -> bool {
     (certificate.conditions.ambient_min_celsius..=certificate.conditions.ambient_max_celsius).contains(&celsius)
 }
 
-/// The temperature nearest in time.
-fn temperature(slow: &[Slow], time_us: u64) -> Option<f64> {
+/// The temperature nearest in time, degrees Celsius, where it is measured.
+pub fn temperature(slow: &[Slow], time_us: u64) -> Option<f64> {
     let measured = slow.iter().filter_map(|slow| Some((slow.time_us.abs_diff(time_us), slow.enclosure_centicelsius?)));
     measured.min_by_key(|(away, _)| *away).map(|(_, centicelsius)| f64::from(centicelsius) * 0.01)
 }
