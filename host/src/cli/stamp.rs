@@ -87,5 +87,7 @@ pub fn reduce(run: &Path, reduction: &Reduction, command: &str) -> Result<Verdic
         writer.stamp(key, &stamp).map_err(Failure::job)?;
     }
     writer.finish_reduction(key).map_err(Failure::job)?;
+    // Closed before the writer, so that the writer can fold its log back into the one file.
+    drop(reader);
     Ok(counts)
 }

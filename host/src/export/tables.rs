@@ -90,7 +90,7 @@ const EVENTS: &[Column] = &[
 const SLOW: &[Column] = &[
     always("epoch", Kind::Integer, "", "key of the controller's power-up within the run"),
     sometimes("time_utc", Kind::Time, "", "when"),
-    sometimes("beam_na", Kind::Integer, "nA", "beam current, mean over a second; empty is not evaluated"),
+    sometimes("beam_na", Kind::Integer, "nA", "beam current, mean since the row before; empty is not evaluated"),
     sometimes(
         "enclosure_celsius",
         Kind::Number,
@@ -128,7 +128,7 @@ pub(super) const ALL: [&Table; 6] = [
     &Table {
         name: "slow",
         file: "slow.csv",
-        description: "Beam current and temperature, once a second.",
+        description: "Beam current and temperature, five times a second.",
         columns: SLOW,
     },
     &Table { name: "gaps", file: "gaps.csv", description: "Entries that were lost, and counted.", columns: GAPS },

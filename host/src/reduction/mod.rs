@@ -81,8 +81,9 @@ pub fn is_interlock_change(kind: &EventKind) -> bool {
 
 /// Slow inputs this far from an exposure still tell its temperature, microseconds.
 const TEMPERATURE_REACH_US: u64 = 60_000_000;
-/// Beam current is compared over the exposure and this much to either side, microseconds: it is a mean over a second.
-const BEAM_REACH_US: u64 = 1_500_000;
+/// A beam current is the mean over this long before its time, microseconds: the one that covers an exposure's end may come
+/// so much later.
+const BEAM_REACH_US: u64 = 200_000;
 
 /// A way to reduce a recording: one profile with one certificate.
 #[derive(Clone, Debug)]
@@ -162,7 +163,7 @@ impl Reduction {
                 .epochs()
                 .iter()
                 .any(|other| other.key != epoch.key && (from_ns..=exposure.end_utc_ns).contains(&other.zero_utc_ns)),
-            beam_na: &beam(&slow, start_us.saturating_sub(BEAM_REACH_US), start_us + length_us + BEAM_REACH_US),
+            beam_na: &beam(&slow, start_us, start_us + length_us + BEAM_REACH_US),
             enclosure_celsius,
             temperature_covered: enclosure_celsius.map(|celsius| covers_temperature(calibration.certificate, celsius)),
             certificate_valid: Some(calibration.certificate.validity(calibration.day) == Validity::Valid),
