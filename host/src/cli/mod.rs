@@ -7,6 +7,7 @@ use std::process::ExitCode;
 use clap::{Parser, Subcommand};
 
 mod bench;
+mod calibrate;
 mod failure;
 
 pub use failure::Failure;
@@ -25,6 +26,8 @@ pub struct Cli {
 pub enum Command {
     /// Check, begin or explain a bench profile: the file that describes one bench.
     Bench(bench::Args),
+    /// Calibrate the divider against a reference, check it, show certificates.
+    Calibrate(calibrate::Args),
 }
 
 /// Parses the command line, carries it out and gives the exit code: 0 done, 1 failed with a stated reason, 2 wrong usage.
@@ -42,5 +45,6 @@ pub fn main() -> ExitCode {
 fn dispatch(command: &Command) -> Result<(), Failure> {
     match command {
         Command::Bench(args) => bench::run(args),
+        Command::Calibrate(args) => calibrate::run(args),
     }
 }
