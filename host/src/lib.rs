@@ -4,11 +4,20 @@
 
 pub mod calibration;
 pub mod cli;
+pub mod clock;
 pub mod divider;
+pub mod export;
+pub mod frames;
 pub mod instrument;
+pub mod link;
 pub mod metrology;
 pub mod physics;
 pub mod profile;
+pub mod reduction;
+pub mod report;
 pub mod rings;
 pub mod run;
+pub mod session;
+pub mod simulation;
+pub mod stamp;
 pub mod text;
