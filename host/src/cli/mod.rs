@@ -9,6 +9,7 @@ use clap::{Parser, Subcommand};
 mod bench;
 mod calibrate;
 mod failure;
+mod predict;
 
 pub use failure::Failure;
 
@@ -28,6 +29,8 @@ pub enum Command {
     Bench(bench::Args),
     /// Calibrate the divider against a reference, check it, show certificates.
     Calibrate(calibrate::Args),
+    /// Wavelength and rings this tube would show at given voltages.
+    Predict(predict::Args),
 }
 
 /// Parses the command line, carries it out and gives the exit code: 0 done, 1 failed with a stated reason, 2 wrong usage.
@@ -46,5 +49,6 @@ fn dispatch(command: &Command) -> Result<(), Failure> {
     match command {
         Command::Bench(args) => bench::run(args),
         Command::Calibrate(args) => calibrate::run(args),
+        Command::Predict(args) => predict::run(args),
     }
 }
