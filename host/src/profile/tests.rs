@@ -2,6 +2,8 @@
 
 use std::path::{Path, PathBuf};
 
+use proptest::prelude::*;
+
 use super::*;
 use crate::calibration;
 
@@ -299,4 +301,29 @@ fn with_an_inverting_front_end_the_limit_is_the_size_of_the_code() {
     certificate.sense.code_min = 0;
     let code = negative.settings_record(Some(&certificate)).unwrap().limit_code;
     assert_eq!(code, 16_960);
+}
+
+proptest! {
+    #![proptest_config(ProptestConfig { cases: 500, failure_persistence: None, ..ProptestConfig::default() })]
+
+    /// Damaged profiles load within their ranges or are refused with sentences that name the file.
+    #[test]
+    fn damaged_profiles_never_panic(edits in prop::collection::vec((any::<u16>(), any::<u8>()), 1..6)) {
+        let mut bytes = example().into_bytes();
+        for (at, value) in edits {
+            let at = usize::from(at) % bytes.len();
+            if value % 2 == 0 { bytes[at] = value / 2 } else { bytes.insert(at, value / 2) }
+        }
+        match Profile::parse(&String::from_utf8_lossy(&bytes), "bench.toml") {
+            Ok(mut profile) => for field in FIELDS {
+                if let Kind::Number { least, most, at } = field.kind {
+                    prop_assert!((least..=most).contains(at(&mut profile)), "{}", field.path);
+                }
+            },
+            Err(error) => prop_assert!(error.faults().iter().all(|fault| {
+                let sentence = fault.to_string();
+                sentence.starts_with("bench.toml") && !sentence.contains('\n')
+            }), "{}", error),
+        }
+    }
 }
