@@ -8,6 +8,7 @@ use clap::{Parser, Subcommand};
 
 mod bench;
 mod calibrate;
+mod divider;
 mod failure;
 mod predict;
 
@@ -29,6 +30,8 @@ pub enum Command {
     Bench(bench::Args),
     /// Calibrate the divider against a reference, check it, show certificates.
     Calibrate(calibrate::Args),
+    /// Ratio, stress, settling, bleeding and accuracy of the divider in a profile.
+    Divider(divider::Args),
     /// Wavelength and rings this tube would show at given voltages.
     Predict(predict::Args),
 }
@@ -49,6 +52,7 @@ fn dispatch(command: &Command) -> Result<(), Failure> {
     match command {
         Command::Bench(args) => bench::run(args),
         Command::Calibrate(args) => calibrate::run(args),
+        Command::Divider(args) => divider::run(args),
         Command::Predict(args) => predict::run(args),
     }
 }
