@@ -29,7 +29,7 @@ pub enum Command {
     /// Check, begin or explain a bench profile: the file that describes one bench.
     Bench(bench::Args),
     /// Calibrate the divider against a reference, check it, show certificates.
-    Calibrate(calibrate::Args),
+    Calibrate(Box<calibrate::Args>),
     /// Ratio, stress, settling, bleeding and accuracy of the divider in a profile.
     Divider(divider::Args),
     /// Wavelength and rings this tube would show at given voltages.
