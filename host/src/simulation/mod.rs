@@ -19,11 +19,12 @@ mod truth;
 mod world;
 
 pub use bench::{SetupError, optics, setup};
-pub use camera::{Shot, ShotTruth};
+pub use camera::{CameraSetup, Shot, ShotTruth};
 pub use picture::{PictureFault, write_picture};
 pub use port::{Port, PortError};
 pub use realtime::{Bench, SimulationError, run};
 pub use render::{Optics, render};
 pub use scenario::{Happening, Scenario, ScenarioError, What};
+pub use supply::SupplySetup;
 pub use truth::Truth;
 pub use world::{Setup, World};
