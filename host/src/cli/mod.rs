@@ -17,6 +17,7 @@ mod report;
 mod run;
 mod simulate;
 mod stamp;
+mod verify;
 
 pub use failure::Failure;
 
@@ -48,6 +49,8 @@ pub enum Command {
     Simulate(simulate::Args),
     /// Stamp every frame of a run again, from raw codes; earlier results stay in the file.
     Stamp(stamp::Args),
+    /// Check a run file and say what may still be trusted.
+    Verify(verify::Args),
 }
 
 /// Parses the command line, carries it out and gives the exit code: 0 done, 1 failed with a stated reason, 2 wrong usage.
@@ -72,5 +75,6 @@ fn dispatch(command: &Command) -> Result<(), Failure> {
         Command::Run(args) => run::run(args),
         Command::Simulate(args) => simulate::run(args),
         Command::Stamp(args) => stamp::run(args),
+        Command::Verify(args) => verify::run(args),
     }
 }
