@@ -8,7 +8,11 @@ mod frames;
 mod sequence;
 mod stamps;
 
-use std::fmt;
+use std::{
+    fmt,
+    fs::File,
+    io::{Read, Seek, SeekFrom},
+};
 
 use ringvolt_protocol::DeviceKind;
 
@@ -103,7 +107,15 @@ fn file(reader: &RunReader) -> Result<Vec<Finding>, RunError> {
     const SUBJECT: &str = "file";
     let found = reader.integrity()?;
     if found.is_empty() {
-        return Ok(vec![Finding::fine(SUBJECT, "the database is whole")]);
+        return Ok(vec![match missing_bytes(reader)? {
+            0 => Finding::fine(SUBJECT, "the database is whole"),
+            missing => Finding::fault(
+                SUBJECT,
+                format!(
+                    "the last {missing} bytes of the file are missing: it was cut off in copying, fetch the original"
+                ),
+            ),
+        }]);
     }
     let first = found.first().map_or("", String::as_str).replace('\n', "; ");
     let sentence = format!(
@@ -111,6 +123,30 @@ fn file(reader: &RunReader) -> Result<Vec<Finding>, RunError> {
         found.len()
     );
     Ok(vec![Finding::fault(SUBJECT, sentence)])
+}
+
+/// How much shorter the file is than its own header says. A page that is cut off may have been an unused one, which the
+/// database does not miss. While there is a log, pages may be in there.
+fn missing_bytes(reader: &RunReader) -> Result<u64, RunError> {
+    const PAGE_COUNT_AT: u64 = 28; // "In-header database size", SQLite database file format, section 1.3
+    if journal_mode(reader)? == "wal" {
+        return Ok(0);
+    }
+    let size: u32 = reader.read(|c| c.query_row("PRAGMA page_size", [], |row| row.get(0)))?;
+    let looked = || -> std::io::Result<(u32, u64)> {
+        let mut file = File::open(reader.path())?;
+        let mut pages = [0; 4];
+        file.seek(SeekFrom::Start(PAGE_COUNT_AT))?;
+        file.read_exact(&mut pages)?;
+        Ok((u32::from_be_bytes(pages), file.metadata()?.len()))
+    };
+    let (pages, length) = looked()
+        .map_err(|error| RunError::Read { path: reader.path().display().to_string(), why: error.to_string() })?;
+    Ok((u64::from(pages) * u64::from(size)).saturating_sub(length))
+}
+
+fn journal_mode(reader: &RunReader) -> Result<String, RunError> {
+    reader.read(|c| c.query_row("PRAGMA journal_mode", [], |row| row.get(0)))
 }
 
 fn references(reader: &RunReader) -> Result<Vec<Finding>, RunError> {
@@ -138,8 +174,7 @@ fn references(reader: &RunReader) -> Result<Vec<Finding>, RunError> {
 /// A log beside the file holds what was committed last: whoever copies the file alone loses it.
 fn clean_end(reader: &RunReader) -> Result<Vec<Finding>, RunError> {
     const SUBJECT: &str = "clean end";
-    let mode: String = reader.read(|c| c.query_row("PRAGMA journal_mode", [], |row| row.get(0)))?;
-    if mode != "wal" {
+    if journal_mode(reader)? != "wal" {
         return Ok(vec![Finding::fine(SUBJECT, "the recording was closed, everything is in the one file")]);
     }
     let mut log = reader.path().as_os_str().to_owned();
