@@ -390,7 +390,8 @@ fn intervals_of_a_thousand_calibrations_hold_the_truth_as_often_as_they_say() {
     for bench in 0..BENCHES {
         let flaws = drawn(&mut rng, &example().reference);
         let world = World::new(bench, flaws);
-        let (_folder, mut session) = session(10, 3);
+        let (_folder, session) = session(10, 3);
+        let mut session = session.without_waiting();
         guided(&mut session, &world, &mut Person::new(&world, &[])).unwrap();
         let Some(certificate) = certified(&session) else {
             none += 1;
