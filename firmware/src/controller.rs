@@ -597,10 +597,7 @@ fn over_range(min: i16, max: i16) -> bool {
 }
 
 fn times(settings: &SettingsRecord) -> InterlockTimes {
-    InterlockTimes {
-        discrepancy_us: u32::from(settings.discrepancy_ms) * 1_000,
-        contactor_us: u32::from(settings.contactor_ms) * 1_000,
-    }
+    InterlockTimes::new(u32::from(settings.discrepancy_ms) * 1_000, u32::from(settings.contactor_ms) * 1_000)
 }
 
 const fn request_of(request: &StoreRequest) -> Request {

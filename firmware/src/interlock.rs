@@ -31,13 +31,33 @@ pub const LONG_MOST_US: u32 = 15_000_000;
 /// A button held this long is stuck.
 pub const STUCK_US: u32 = 30_000_000;
 
-/// The times that settings decide, microseconds.
+/// The times of the interlock, microseconds. Settings decide the first two; the others are the constants above, and are
+/// values here so that an exploration can visit every state with few ticks between one limit and the next.
 #[derive(Clone, Copy, Debug, PartialEq, Eq, Hash)]
 pub struct InterlockTimes {
     /// How long the loops may differ.
     pub discrepancy_us: u32,
     /// How long the contactors may take to follow.
     pub contactor_us: u32,
+    /// Shortest and longest press that counts.
+    pub press_us: (u32, u32),
+    /// Shortest and longest press that starts without a certificate.
+    pub long_us: (u32, u32),
+    /// A button held this long is stuck.
+    pub stuck_us: u32,
+}
+
+impl InterlockTimes {
+    /// With the times that settings decide.
+    pub const fn new(discrepancy_us: u32, contactor_us: u32) -> Self {
+        Self {
+            discrepancy_us,
+            contactor_us,
+            press_us: (PRESS_LEAST_US, PRESS_MOST_US),
+            long_us: (LONG_LEAST_US, LONG_MOST_US),
+            stuck_us: STUCK_US,
+        }
+    }
 }
 
 /// What one loop has shown since the permit was withdrawn.
@@ -201,9 +221,9 @@ impl Interlock {
         self.lone_us = self.lone_us.map(|lone_us| run(lone_us, true, self.times.discrepancy_us));
         let follows = contacts.contactors_released != self.is_given();
         self.contactor_us = run(self.contactor_us, !follows, self.times.contactor_us);
-        self.pressed_us = run(self.pressed_us, contacts.button_pressed, STUCK_US);
+        self.pressed_us = run(self.pressed_us, contacts.button_pressed, self.times.stuck_us);
         // Time until the release is seen belongs to the press.
-        self.held_us = run(self.held_us, self.phase == Phase::Pressed, LONG_MOST_US + 1);
+        self.held_us = run(self.held_us, self.phase == Phase::Pressed, self.times.long_us.1 + 1);
     }
 
     /// Loop tests and causes.
@@ -223,7 +243,7 @@ impl Interlock {
         add_if(differ, Trip::LoopsDisagree);
         add_if(late && !was_given, Trip::ContactorWelded);
         add_if(late && was_given, Trip::ContactorDropped);
-        add_if(self.pressed_us >= STUCK_US, Trip::ButtonStuck);
+        add_if(self.pressed_us >= self.times.stuck_us, Trip::ButtonStuck);
         if self.is_uncalibrated() {
             present.remove(Trip::NoCertificate);
         }
@@ -291,8 +311,8 @@ impl Interlock {
             return Changes::default();
         }
         let held = self.held_us;
-        let short = (PRESS_LEAST_US..=PRESS_MOST_US).contains(&held);
-        let long = (LONG_LEAST_US..=LONG_MOST_US).contains(&held);
+        let short = (self.times.press_us.0..=self.times.press_us.1).contains(&held);
+        let long = (self.times.long_us.0..=self.times.long_us.1).contains(&held);
         let calibrated = !self.present.contains(Trip::NoCertificate);
         if (short && calibrated) || (long && !calibrated) {
             let changes =
