@@ -2,7 +2,13 @@
 //!
 //! Lower modules know nothing of higher ones; `DEVELOPERS.md` has the table and a test checks it.
 
+pub mod calibration;
+pub mod cli;
+pub mod clock;
 pub mod divider;
+pub mod link;
 pub mod metrology;
 pub mod physics;
+pub mod profile;
 pub mod rings;
+pub mod run;

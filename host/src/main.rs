@@ -1,2 +1,5 @@
-//! Command.
-fn main() {}
+//! The `ringvolt` command.
+
+fn main() -> std::process::ExitCode {
+    ringvolt::cli::main()
+}
