@@ -7,6 +7,7 @@
 //! | module | subject |
 //! | --- | --- |
 //! | [`io`] | what goes in and what comes out |
+//! | [`store`] | records in flash that survive a power cut at any instant |
 //! | [`controller`] | `poll`: owns the parts below and passes values between them |
 //!
 //! The controller is not a safety function. The hard-wired chain of `hardware-notes/interlock.md` is; this code can
@@ -15,5 +16,6 @@
 
 pub mod controller;
 pub mod io;
+pub mod store;
 
 pub use controller::Controller;
