@@ -1,15 +1,188 @@
-//! placeholder
+//! The Ringvolt controller's image for RP2040 boards: pins, buses, ports, flash and watchdog around
+//! [`ringvolt_firmware::Controller`]. Nothing is decided here.
+//!
+//! | file | subject |
+//! | --- | --- |
+//! | `pins`, `edges`, `analog` | outputs; inputs with the time of their edges; the two slow inputs |
+//! | `bus`, `converters` | I2C with an end to every wait; the two converters on it |
+//! | `usb`, `uart`, `link` | the two ports, and which is served |
+//! | `flash`, `records` | the flash chip; the two records in it |
+//! | `clock`, `wake`, `watchdog`, `reset` | time, sleep, the dead man's switch, why the last epoch ended |
 #![no_std]
 #![no_main]
-use rp2040_hal as hal;
-#[unsafe(link_section = ".boot2")]
+
+mod analog;
+mod bus;
+mod clock;
+mod converters;
+mod edges;
+mod flash;
+mod link;
+mod pins;
+mod records;
+mod reset;
+mod uart;
+mod usb;
+mod wake;
+mod watchdog;
+
+#[cfg(feature = "defmt")]
+use defmt_rtt as _;
+use ringvolt_firmware::{
+    Controller,
+    io::{Boot, Inputs},
+};
+use ringvolt_protocol::DeviceKind;
+use rp2040_hal::{
+    Adc, Clock, Sio, Watchdog,
+    adc::AdcPin,
+    clocks::init_clocks_and_plls,
+    gpio::{PinState, Pins},
+    pac,
+    usb::UsbBus,
+};
+use usb_device::bus::UsbBusAllocator;
+
+use crate::{
+    analog::Slow,
+    flash::Flash,
+    link::{Link, ROUND_BYTES},
+    pins::{Driven, Fitted},
+    uart::Uart,
+    usb::Usb,
+    wake::Sleep,
+    watchdog::Dog,
+};
+
+/// The second-stage boot loader, for flash chips of the W25Q kind.
 #[allow(unsafe_code)]
+// SAFETY: the chip's ROM looks for exactly this at the start of the flash; `memory.x` puts it there.
+#[unsafe(link_section = ".boot2")]
 #[unsafe(no_mangle)]
 #[used]
 static BOOT2_FIRMWARE: [u8; 256] = rp2040_boot2::BOOT_LOADER_W25Q080;
-#[panic_handler]
-fn panic(_: &core::panic::PanicInfo) -> ! { loop {} }
-#[hal::entry]
+
+const CRYSTAL_HZ: u32 = 12_000_000;
+
+#[rp2040_hal::entry]
 fn main() -> ! {
-    loop { cortex_m::asm::wfe(); }
+    let reset_cause = reset::cause();
+    let (Some(core), Some(mut chip)) = (pac::CorePeripherals::take(), pac::Peripherals::take()) else {
+        panic!("started twice")
+    };
+    let mut watchdog = Watchdog::new(chip.WATCHDOG);
+    let Ok(clocks) = init_clocks_and_plls(
+        CRYSTAL_HZ,
+        chip.XOSC,
+        chip.CLOCKS,
+        chip.PLL_SYS,
+        chip.PLL_USB,
+        &mut chip.RESETS,
+        &mut watchdog,
+    ) else {
+        panic!("the crystal does not start")
+    };
+    let _timer = rp2040_hal::Timer::new(chip.TIMER, &mut chip.RESETS, &clocks);
+    let mut dog = Dog::start(watchdog);
+
+    let sio = Sio::new(chip.SIO);
+    let pins = Pins::new(chip.IO_BANK0, chip.PADS_BANK0, sio.gpio_bank0, &mut chip.RESETS);
+    let mut driven = Driven {
+        permit: pins.gpio16.into_push_pull_output_in_state(PinState::Low),
+        lamp: pins.gpio17.into_push_pull_output_in_state(PinState::Low),
+        hv_lamp_dark: pins.gpio18.into_push_pull_output_in_state(PinState::Low),
+        led: pins.gpio25.into_push_pull_output_in_state(PinState::Low),
+    };
+    let fitted = Fitted::read(
+        pins.gpio20.into_pull_up_input(),
+        pins.gpio21.into_pull_up_input(),
+        pins.gpio22.into_pull_up_input(),
+    );
+    // A broken wire reads as open, not released, not pressed, not exposing.
+    let _inputs = (
+        pins.gpio10.into_pull_down_input(),
+        pins.gpio11.into_pull_down_input(),
+        pins.gpio12.into_pull_down_input(),
+        pins.gpio13.into_pull_down_input(),
+        pins.gpio14.into_pull_down_input(),
+        // A comparator that is fitted but not connected reads as tripped.
+        pins.gpio15.into_pull_up_input(),
+        // The converters' ready pins are open drain.
+        pins.gpio8.into_pull_up_input(),
+        pins.gpio9.into_pull_up_input(),
+    );
+
+    // SAFETY: called once; one core runs, no DMA is in use.
+    #[allow(unsafe_code)]
+    let mut flash = unsafe { Flash::take() };
+    let device = flash.unique_id();
+    let epoch = flash::STARTS.next(&mut flash);
+    let boot = Boot {
+        device,
+        kind: DeviceKind::Board,
+        epoch,
+        reset_cause,
+        certificate: records::certificate(&mut flash),
+        settings: records::settings(&mut flash),
+    };
+    let mut controller = Controller::new(boot);
+
+    let mut serial_number = [0; 16];
+    let serial_number = hex(&device, &mut serial_number);
+    let usb_bus = UsbBusAllocator::new(UsbBus::new(
+        chip.USBCTRL_REGS,
+        chip.USBCTRL_DPRAM,
+        clocks.usb_clock,
+        true,
+        &mut chip.RESETS,
+    ));
+    let usb = Usb::new(&usb_bus, serial_number);
+    let uart_pins = (pins.gpio0.into_function(), pins.gpio1.into_function().into_pull_type());
+    let uart = Uart::new(chip.UART0, uart_pins, &mut chip.RESETS, clocks.peripheral_clock.freq());
+    let mut link = Link::new(usb, uart);
+
+    let (Ok(beam), Ok(temperature)) = (
+        AdcPin::new(pins.gpio26.into_floating_disabled()),
+        AdcPin::new(pins.gpio27.into_floating_disabled()),
+    ) else {
+        panic!("GP26 and GP27 are analog pins")
+    };
+    let mut slow = Slow::new(Adc::new(chip.ADC, &mut chip.RESETS), beam, temperature, fitted);
+
+    edges::start();
+    let mut sleep = Sleep::new(core.SYST, clocks.system_clock.freq().to_Hz());
+    dog.alert();
+    let mut stored = None;
+    loop {
+        sleep.until_woken();
+        let sample = edges::take();
+        let mut received = [0; ROUND_BYTES];
+        let count = link.receive(sample.now_us, &mut received);
+        let optional = slow.inputs(sample.now_us, sample.comparator);
+        let outputs = controller.poll(sample.now_us, &Inputs {
+            contacts: sample.contacts,
+            edges: &sample.caught.edges,
+            conversions: &[],
+            notices: &[],
+            optional,
+            received: &received[..count],
+            stored: stored.take(),
+            idle_per_mille: sleep.idle_per_mille(),
+        });
+        driven.apply(&outputs);
+        dog.feed();
+        if let Some(request) = &outputs.store {
+            stored = Some(dog.patience(|| records::write(&mut flash, request)));
+        }
+        link.send(&mut controller);
+    }
+}
+
+fn hex<'a>(bytes: &[u8; 8], text: &'a mut [u8; 16]) -> &'a str {
+    const DIGITS: [u8; 16] = *b"0123456789ABCDEF";
+    for (index, byte) in bytes.iter().enumerate() {
+        text[2 * index] = DIGITS[usize::from(byte >> 4)];
+        text[2 * index + 1] = DIGITS[usize::from(byte & 15)];
+    }
+    core::str::from_utf8(text).unwrap_or("")
 }

@@ -1,0 +1,140 @@
+//! Which of the two ports is served.
+//!
+//! The first host to say something whole (a frame with the right CRC) is served, on its port; a host that speaks on the
+//! other port meanwhile hears that the controller is busy. A host that has said nothing for [`RELEASE_US`] has left.
+//! Noise on an unconnected port is no host: nothing but whole frames counts.
+
+use ringvolt_firmware::Controller;
+use ringvolt_protocol::{Decoder, MAX_FRAME, ToDevice, ToHost, encode};
+
+use crate::{uart::Uart, usb::Usb};
+
+/// Twice the longest heartbeat interval, and the controller's own default grace: then the port is free for another host.
+const RELEASE_US: u64 = 5_000_000;
+
+/// The controller answers "busy" at most this often.
+const BUSY_INTERVAL_US: u64 = 200_000;
+
+/// Most bytes that one round takes from a port: more would make the round long.
+pub const ROUND_BYTES: usize = 128;
+
+#[derive(Clone, Copy, PartialEq, Eq)]
+enum Port {
+    Usb,
+    Uart,
+}
+
+/// What a port that is not served has said.
+struct Listener {
+    decoder: Decoder,
+    busy_sent_us: Option<u64>,
+}
+
+/// The two ports and who is served.
+pub struct Link<'a> {
+    usb: Option<Usb<'a>>,
+    uart: Option<Uart>,
+    served: Option<Port>,
+    heard_us: u64,
+    /// Finds whole frames in what the served host says, to know that it is still there.
+    witness: Decoder,
+    listeners: [Listener; 2],
+}
+
+impl<'a> Link<'a> {
+    /// A link on whichever ports there are.
+    pub fn new(usb: Option<Usb<'a>>, uart: Option<Uart>) -> Self {
+        let listener = || Listener { decoder: Decoder::new(), busy_sent_us: None };
+        Self { usb, uart, served: None, heard_us: 0, witness: Decoder::new(), listeners: [listener(), listener()] }
+    }
+
+    /// Takes what came in on both ports; the served host's bytes go into `received`, how many is returned.
+    pub fn receive(&mut self, now_us: u64, received: &mut [u8; ROUND_BYTES]) -> usize {
+        if let Some(usb) = &mut self.usb {
+            usb.serve();
+        }
+        if self.served.is_some() && now_us.saturating_sub(self.heard_us) > RELEASE_US {
+            self.served = None;
+        }
+        let mut count = 0;
+        for port in [Port::Usb, Port::Uart] {
+            let mut bytes = [0; ROUND_BYTES];
+            let taken = self.read(port, &mut bytes);
+            if taken == 0 {
+                continue;
+            }
+            if self.served == Some(port) {
+                for byte in &bytes[..taken] {
+                    if self.witness.push::<ToDevice>(*byte).is_some() {
+                        self.heard_us = now_us;
+                    }
+                }
+                received[..taken].copy_from_slice(&bytes[..taken]);
+                count = taken;
+            } else {
+                count = self.listen(port, now_us, &bytes[..taken], received).unwrap_or(count);
+            }
+        }
+        count
+    }
+
+    /// Gives the served host what waits for it.
+    pub fn send(&mut self, controller: &mut Controller) {
+        let Some(port) = self.served else { return };
+        let waiting = controller.outgoing();
+        if waiting.is_empty() {
+            return;
+        }
+        let count = match port {
+            Port::Usb => self.usb.as_mut().map_or(0, |usb| usb.write(waiting)),
+            Port::Uart => self.uart.as_mut().map_or(0, |uart| uart.write(waiting)),
+        };
+        controller.sent(count);
+    }
+
+    fn read(&mut self, port: Port, bytes: &mut [u8]) -> usize {
+        match port {
+            Port::Usb => self.usb.as_mut().map_or(0, |usb| usb.read(bytes)),
+            Port::Uart => self.uart.as_mut().map_or(0, |uart| uart.read(bytes)),
+        }
+    }
+
+    /// Hears a port that is not served. Its first whole message makes it the served one if there is none; that message
+    /// and the bytes behind it are then the controller's.
+    fn listen(&mut self, port: Port, now_us: u64, bytes: &[u8], received: &mut [u8; ROUND_BYTES]) -> Option<usize> {
+        for (index, byte) in bytes.iter().enumerate() {
+            let listener = &mut self.listeners[port as usize];
+            let Some(message) = listener.decoder.push::<ToDevice>(*byte) else { continue };
+            if self.served.is_some() {
+                self.say_busy(port, now_us);
+                continue;
+            }
+            self.served = Some(port);
+            self.heard_us = now_us;
+            self.witness = Decoder::new();
+            let mut frame = [0; MAX_FRAME];
+            let Ok(length) = encode(&message, &mut frame) else { return None };
+            let rest = &bytes[index + 1..];
+            // A first message longer than a round (a record, before any hello) is left for the host to repeat.
+            let whole = received.get_mut(..length + rest.len())?;
+            whole[..length].copy_from_slice(&frame[..length]);
+            whole[length..].copy_from_slice(rest);
+            return Some(length + rest.len());
+        }
+        None
+    }
+
+    fn say_busy(&mut self, port: Port, now_us: u64) {
+        let listener = &mut self.listeners[port as usize];
+        if listener.busy_sent_us.is_some_and(|sent| now_us.saturating_sub(sent) < BUSY_INTERVAL_US) {
+            return;
+        }
+        listener.busy_sent_us = Some(now_us);
+        let mut frame = [0; MAX_FRAME];
+        let Ok(length) = encode(&ToHost::Busy, &mut frame) else { return };
+        match port {
+            Port::Usb => self.usb.as_mut().map_or(0, |usb| usb.write(&frame[..length])),
+            Port::Uart => self.uart.as_mut().map_or(0, |uart| uart.write(&frame[..length])),
+        };
+    }
+}
