@@ -165,6 +165,9 @@ export function apply(world, event) {
       case 'power_on':
         world.boot(true);
         break;
+      case 'frame':
+        world.onFrame?.(value);
+        break;
       case 'step_utc_ns':
         world.utcStep = (world.utcStep ?? 0n) + BigInt(value);
         break;

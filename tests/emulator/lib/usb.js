@@ -26,14 +26,17 @@ export class UsbHost {
   constructor() {
     this.onBytes = () => {};
     this.onUp = () => {};
+    this.onDown = () => {};
     this.plugged = true;
     this.reading = true;
+    this.toBoard = [];
     this.detach();
   }
 
   detach() {
+    this.onDown();
     this.up = false;
-    this.toBoard = [];
+    this.toBoard.length = 0;
     this.heldRead = 0;
     this.heldPackets = [];
     this.state = 'off';
@@ -133,6 +136,7 @@ export class UsbHost {
     if (this.plugged === yes) return;
     this.plugged = yes;
     if (!yes) {
+      this.onDown();
       this.toBoard = [];
       return;
     }

@@ -50,6 +50,7 @@ export class World {
     this.levels = new Map();
     this.adc = [0, 0];
     this.edges = { permit: [], lamp: [], hv_dark: [], led: [] };
+    for (const edges of Object.values(this.edges)) Object.assign(edges, { level: false, count: 0 });
     this.keepEdges = new Set(['permit']);
     this.tube = tube;
     this.converters = {
@@ -157,7 +158,7 @@ export class World {
     if (edges.level === high) return;
     edges.level = high;
     edges.last = this.now;
-    edges.count = (edges.count ?? 0) + 1;
+    edges.count++;
     if (this.keepEdges.has(name)) edges.push(this.now);
     this.onOutput?.(name, high);
   }
