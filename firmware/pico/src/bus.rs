@@ -11,7 +11,7 @@ use embedded_hal::{
     i2c::{self, ErrorKind, I2c, NoAcknowledgeSource, Operation},
 };
 use rp2040_hal::{
-    gpio::{FunctionI2C, InOutPin, Pin, PinId, PullUp, ValidFunction, FunctionSioOutput},
+    gpio::{FunctionI2C, FunctionSioOutput, InOutPin, Pin, PinId, PullUp, ValidFunction},
     pac::{self, i2c0::RegisterBlock},
 };
 
@@ -52,6 +52,19 @@ impl i2c::Error for BusError {
     }
 }
 
+/// A bus that can free itself, and that can read without anybody waiting.
+pub trait PatientBus: I2c<Error = BusError> {
+    /// Asks a device for two bytes and returns at once; no other transfer may begin before [`Self::answer`] has come.
+    fn ask(&mut self, address: u8);
+
+    /// The two bytes; `None` while the transfer is under way and in time.
+    fn answer(&mut self) -> Option<Result<[u8; 2], BusError>>;
+
+    /// Frees a held bus: nine clocks let any device finish the byte it believes it is sending, then a stop. Tells
+    /// whether both lines are high afterwards. Takes up to 110 us.
+    fn recover(&mut self) -> bool;
+}
+
 type BusPin<I> = Pin<I, FunctionI2C, PullUp>;
 
 /// One I2C block with its two pins.
@@ -61,6 +74,8 @@ pub struct Bus<B, D: PinId, C: PinId> {
     reset_bit: u32,
     /// Always there except within `recover`.
     pins: Option<(BusPin<D>, BusPin<C>)>,
+    /// When the transfer under way must be over.
+    limit_us: u64,
 }
 
 impl<B, D, C> Bus<B, D, C>
@@ -71,32 +86,9 @@ where
 {
     /// Takes a block and its data and clock pins; `reset_bit` is the block's bit in RESETS.
     pub fn new(block: B, reset_bit: u32, data: BusPin<D>, clock: BusPin<C>) -> Self {
-        let bus = Self { block, reset_bit, pins: Some((data, clock)) };
+        let bus = Self { block, reset_bit, pins: Some((data, clock)), limit_us: 0 };
         bus.restart();
         bus
-    }
-
-    /// Frees a held bus: nine clocks let any device finish the byte it believes it is sending, then a stop. Tells
-    /// whether both lines are high afterwards. Takes up to 110 us.
-    pub fn recover(&mut self) -> bool {
-        let Some((data, clock)) = self.pins.take() else { return false };
-        let mut data = InOutPin::new(data);
-        let mut clock = InOutPin::new(clock);
-        // The pins' methods cannot fail; their error type only says so in a roundabout way.
-        for _ in 0..9 {
-            let _ = clock.set_low();
-            pause(RECOVERY_HALF_US);
-            let _ = clock.set_high();
-            pause(RECOVERY_HALF_US);
-        }
-        let _ = data.set_low();
-        pause(RECOVERY_HALF_US);
-        let _ = data.set_high();
-        pause(RECOVERY_HALF_US);
-        let freed = matches!((data.is_high(), clock.is_high()), (Ok(true), Ok(true)));
-        self.pins = Some((data.release(), clock.release()));
-        self.restart();
-        freed
     }
 
     /// Resets the block and sets it up: the only sure way out of a transfer that does not end.
@@ -148,9 +140,9 @@ where
         }
         // SAFETY: any eight bits are data.
         #[allow(unsafe_code)]
-        self.block.ic_data_cmd().write(|w| unsafe {
-            w.cmd().bit(byte.is_none()).stop().bit(last).dat().bits(byte.unwrap_or(0))
-        });
+        self.block
+            .ic_data_cmd()
+            .write(|w| unsafe { w.cmd().bit(byte.is_none()).stop().bit(last).dat().bits(byte.unwrap_or(0)) });
         Ok(())
     }
 
@@ -177,6 +169,19 @@ where
             return Err(if lost { BusError::ArbitrationLost } else { BusError::NotAcknowledged });
         }
         if now_us() > limit_us { Err(BusError::TimedOut) } else { Ok(()) }
+    }
+
+    /// Leaves the block ready for the next transfer after one that ended as `outcome`.
+    fn tidy<R>(&self, outcome: Result<R, BusError>) -> Result<R, BusError> {
+        match outcome {
+            Ok(_) => {}
+            // The block closes a refused transfer with a stop of its own; resetting it meanwhile would hold the bus.
+            Err(BusError::NotAcknowledged) => {
+                let _ = self.wait_for_stop(now_us() + TRANSFER_LIMIT_US);
+            }
+            Err(_) => self.restart(),
+        }
+        outcome
     }
 
     fn run(&self, address: u8, operations: &mut [Operation<'_>], limit_us: u64) -> Result<(), BusError> {
@@ -220,10 +225,55 @@ where
 {
     fn transaction(&mut self, address: u8, operations: &mut [Operation<'_>]) -> Result<(), BusError> {
         let limit_us = now_us() + TRANSFER_LIMIT_US;
+        self.limit_us = limit_us;
         let outcome = self.run(address, operations, limit_us);
-        if outcome.is_err() {
-            self.restart();
+        self.tidy(outcome)
+    }
+}
+
+impl<B, D, C> PatientBus for Bus<B, D, C>
+where
+    B: Deref<Target = RegisterBlock>,
+    D: PinId + ValidFunction<FunctionI2C> + ValidFunction<FunctionSioOutput>,
+    C: PinId + ValidFunction<FunctionI2C> + ValidFunction<FunctionSioOutput>,
+{
+    fn ask(&mut self, address: u8) {
+        self.limit_us = now_us() + TRANSFER_LIMIT_US;
+        self.address(address);
+        // The FIFO is empty, so both requests fit; an error here shows in the answer.
+        let _ = self.queue(None, false, self.limit_us);
+        let _ = self.queue(None, true, self.limit_us);
+    }
+
+    fn answer(&mut self) -> Option<Result<[u8; 2], BusError>> {
+        let stopped = self.block.ic_raw_intr_stat().read().stop_det().bit_is_set();
+        // A transfer that has ended was in time, however late this look is.
+        let outcome = match self.check(if stopped { u64::MAX } else { self.limit_us }) {
+            Ok(()) if !stopped => return None,
+            Ok(()) => self.fetch(0).and_then(|high| Ok([high, self.fetch(0)?])),
+            Err(error) => Err(error),
+        };
+        Some(self.tidy(outcome))
+    }
+
+    fn recover(&mut self) -> bool {
+        let Some((data, clock)) = self.pins.take() else { return false };
+        let mut data = InOutPin::new(data);
+        let mut clock = InOutPin::new(clock);
+        // The pins' methods cannot fail; their error type only says so in a roundabout way.
+        for _ in 0..9 {
+            let _ = clock.set_low();
+            pause(RECOVERY_HALF_US);
+            let _ = clock.set_high();
+            pause(RECOVERY_HALF_US);
         }
-        outcome
+        let _ = data.set_low();
+        pause(RECOVERY_HALF_US);
+        let _ = data.set_high();
+        pause(RECOVERY_HALF_US);
+        let freed = matches!((data.is_high(), clock.is_high()), (Ok(true), Ok(true)));
+        self.pins = Some((data.release(), clock.release()));
+        self.restart();
+        freed
     }
 }

@@ -53,29 +53,25 @@ const fn line_mask() -> u32 {
     nibble(10, both) | nibble(11, both) | nibble(12, both) | nibble(13, both) | nibble(14, both) | nibble(15, both)
 }
 
-/// Everything the pins have told since it was last taken.
 #[derive(Debug, Default)]
-pub struct Caught {
-    /// Edges of the input lines, oldest first.
-    pub edges: Vec<Edge, CAPACITY>,
-    /// The latest ready edge of each converter (sense, cross-sense), microseconds since power-up.
-    pub ready_us: [Option<u64>; 2],
+struct Caught {
+    edges: Vec<Edge, CAPACITY>,
+    ready_us: [Option<u64>; 2],
 }
 
 /// One look at the pins.
 pub struct Sample {
-    /// What the handler caught.
-    pub caught: Caught,
+    /// Edges of the input lines since the last look, oldest first.
+    pub edges: Vec<Edge, CAPACITY>,
     /// Levels now.
     pub contacts: Contacts,
     /// Level of the over-voltage comparator's pin now.
     pub comparator: bool,
-    /// When "now" is, microseconds since power-up; no edge in `caught` is later.
+    /// When "now" is, microseconds since power-up; no edge is later.
     pub now_us: u64,
 }
 
-static CAUGHT: Mutex<RefCell<Caught>> =
-    Mutex::new(RefCell::new(Caught { edges: Vec::new(), ready_us: [None; 2] }));
+static CAUGHT: Mutex<RefCell<Caught>> = Mutex::new(RefCell::new(Caught { edges: Vec::new(), ready_us: [None; 2] }));
 
 /// Begins to catch edges. The pins must be inputs by now.
 pub fn start() {
@@ -90,17 +86,22 @@ pub fn start() {
     }
 }
 
-/// Takes what was caught, with the levels and the time of this moment.
+/// The latest ready edge of each converter (sense, cross-sense) since the last call, microseconds since power-up.
+pub fn take_ready() -> [Option<u64>; 2] {
+    critical_section::with(|token| core::mem::take(&mut CAUGHT.borrow_ref_mut(token).ready_us))
+}
+
+/// Takes the edges that were caught, with the levels and the time of this moment.
 pub fn take() -> Sample {
     critical_section::with(|token| {
-        let caught = core::mem::take(&mut *CAUGHT.borrow_ref_mut(token));
-        if caught.edges.is_full() {
+        let edges = core::mem::take(&mut CAUGHT.borrow_ref_mut(token).edges);
+        if edges.is_full() {
             allow_lines(true);
         }
         let levels = levels();
         let high = |pin: u32| levels & (1 << pin) != 0;
         Sample {
-            caught,
+            edges,
             contacts: Contacts {
                 loop_a_closed: high(10),
                 loop_b_closed: high(11),
@@ -176,5 +177,9 @@ fn IO_IRQ_BANK0() {
             allow_lines(false);
         }
     });
-    wake::wake();
+    if flags & line_mask() == 0 {
+        wake::nudge();
+    } else {
+        wake::wake();
+    }
 }

@@ -30,7 +30,7 @@ mod watchdog;
 use defmt_rtt as _;
 use ringvolt_firmware::{
     Controller,
-    io::{Boot, Inputs},
+    io::{Boot, Channel, Inputs},
 };
 use ringvolt_protocol::DeviceKind;
 use rp2040_hal::{
@@ -45,6 +45,8 @@ use usb_device::bus::UsbBusAllocator;
 
 use crate::{
     analog::Slow,
+    bus::{Bus, PatientBus},
+    converters::{Converter, Round},
     flash::Flash,
     link::{Link, ROUND_BYTES},
     pins::{Driven, Fitted},
@@ -63,6 +65,14 @@ use crate::{
 static BOOT2_FIRMWARE: [u8; 256] = rp2040_boot2::BOOT_LOADER_W25Q080;
 
 const CRYSTAL_HZ: u32 = 12_000_000;
+
+/// Bits of the two I2C blocks in RESETS (datasheet 2.14.3).
+const RESET_I2C0: u32 = 1 << 3;
+const RESET_I2C1: u32 = 1 << 4;
+
+/// Address pins to ground, and to the supply.
+const SENSE_ADDRESS: u8 = 0x48;
+const CROSS_ADDRESS: u8 = 0x49;
 
 #[rp2040_hal::entry]
 fn main() -> ! {
@@ -141,41 +151,71 @@ fn main() -> ! {
     let uart = Uart::new(chip.UART0, uart_pins, &mut chip.RESETS, clocks.peripheral_clock.freq());
     let mut link = Link::new(usb, uart);
 
-    let (Ok(beam), Ok(temperature)) = (
-        AdcPin::new(pins.gpio26.into_floating_disabled()),
-        AdcPin::new(pins.gpio27.into_floating_disabled()),
-    ) else {
+    let (Ok(beam), Ok(temperature)) =
+        (AdcPin::new(pins.gpio26.into_floating_disabled()), AdcPin::new(pins.gpio27.into_floating_disabled()))
+    else {
         panic!("GP26 and GP27 are analog pins")
     };
     let mut slow = Slow::new(Adc::new(chip.ADC, &mut chip.RESETS), beam, temperature, fitted);
+
+    let sense_bus = Bus::new(chip.I2C0, RESET_I2C0, pins.gpio4.reconfigure(), pins.gpio5.reconfigure());
+    let cross_bus = Bus::new(chip.I2C1, RESET_I2C1, pins.gpio6.reconfigure(), pins.gpio7.reconfigure());
+    let mut sense = Converter::new(Channel::Sense, SENSE_ADDRESS, sense_bus);
+    let mut cross = Converter::new(Channel::Cross, CROSS_ADDRESS, cross_bus);
+    let mut round = Round::default();
+
+    #[cfg(feature = "dead-loop")]
+    let mut deadly = pins.gpio2.into_pull_down_input();
 
     edges::start();
     let mut sleep = Sleep::new(core.SYST, clocks.system_clock.freq().to_Hz());
     dog.alert();
     let mut stored = None;
     loop {
-        sleep.until_woken();
+        if !sleep.until_woken() {
+            start_reading(&mut sense, &mut cross);
+            continue;
+        }
+        #[cfg(feature = "dead-loop")]
+        while embedded_hal::digital::InputPin::is_high(&mut deadly).unwrap_or(false) {}
         let sample = edges::take();
+        sense.finish(&mut round);
+        cross.finish(&mut round);
         let mut received = [0; ROUND_BYTES];
         let count = link.receive(sample.now_us, &mut received);
-        let optional = slow.inputs(sample.now_us, sample.comparator);
-        let outputs = controller.poll(sample.now_us, &Inputs {
-            contacts: sample.contacts,
-            edges: &sample.caught.edges,
-            conversions: &[],
-            notices: &[],
-            optional,
-            received: &received[..count],
-            stored: stored.take(),
-            idle_per_mille: sleep.idle_per_mille(),
-        });
+        let outputs = controller.poll(
+            sample.now_us,
+            &Inputs {
+                contacts: sample.contacts,
+                edges: &sample.edges,
+                conversions: &round.conversions,
+                notices: &round.notices,
+                optional: slow.inputs(sample.now_us, sample.comparator),
+                received: &received[..count],
+                stored: stored.take(),
+                idle_per_mille: sleep.idle_per_mille(),
+            },
+        );
         driven.apply(&outputs);
         dog.feed();
         if let Some(request) = &outputs.store {
             stored = Some(dog.patience(|| records::write(&mut flash, request)));
         }
         link.send(&mut controller);
+        round = Round::default();
+        start_reading(&mut sense, &mut cross);
+        // Waiting for a bus comes last, and for one bus in a round where it failed: a held bus delays the next look at the
+        // interlock by less than a tick.
+        if sense.attend(sample.now_us, &mut round) {
+            cross.attend(sample.now_us, &mut round);
+        }
     }
+}
+
+fn start_reading(sense: &mut Converter<impl PatientBus>, cross: &mut Converter<impl PatientBus>) {
+    let [sense_ready_us, cross_ready_us] = edges::take_ready();
+    sense.start(sense_ready_us);
+    cross.start(cross_ready_us);
 }
 
 fn hex<'a>(bytes: &[u8; 8], text: &'a mut [u8; 16]) -> &'a str {

@@ -8,7 +8,10 @@ use critical_section::Mutex;
 use heapless::Deque;
 use rp2040_hal::{
     fugit::HertzU32,
-    gpio::{FunctionUart, Pin, PullDown, PullUp, bank0::{Gpio0, Gpio1}},
+    gpio::{
+        FunctionUart, Pin, PullDown, PullUp,
+        bank0::{Gpio0, Gpio1},
+    },
     pac::{self, UART0, interrupt},
     uart::{DataBits, Enabled, Reader, StopBits, UartConfig, UartPeripheral, Writer},
 };
@@ -36,7 +39,8 @@ impl Uart {
     /// Sets up the port; `None` where the clock cannot make the baud rate.
     pub fn new(device: UART0, pins: Pins, resets: &mut pac::RESETS, clock: HertzU32) -> Option<Self> {
         let config = UartConfig::new(HertzU32::Hz(BAUD), DataBits::Eight, None, StopBits::One);
-        let port: UartPeripheral<Enabled, _, _> = UartPeripheral::new(device, pins, resets).enable(config, clock).ok()?;
+        let port: UartPeripheral<Enabled, _, _> =
+            UartPeripheral::new(device, pins, resets).enable(config, clock).ok()?;
         let (mut reader, writer) = port.split();
         reader.enable_rx_interrupt();
         critical_section::with(|token| RECEIVER.borrow_ref_mut(token).reader = Some(reader));

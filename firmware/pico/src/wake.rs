@@ -1,7 +1,8 @@
 //! Sleep between polls, and what ends it.
 //!
-//! Every interrupt handler calls [`wake`]; the main loop sleeps until one has. `wfe` is used and not `wfi`: the return
-//! from any handler sets the processor's event flag, so a wake that falls between the check and the sleep is not lost.
+//! Every interrupt handler calls [`wake`], or [`nudge`] where no poll is due for it; the main loop sleeps until one has.
+//! `wfe` is used and not `wfi`: the return from any handler sets the processor's event flag, so a wake that falls between
+//! the check and the sleep is not lost.
 
 use core::sync::atomic::{AtomicBool, Ordering};
 
@@ -15,10 +16,16 @@ pub const TICK_HZ: u32 = 2_000;
 const IDLE_SPAN_US: u64 = 100_000;
 
 static WOKEN: AtomicBool = AtomicBool::new(true);
+static NUDGED: AtomicBool = AtomicBool::new(false);
 
-/// Ends the main loop's sleep. Called by every handler.
+/// Ends the main loop's sleep, for a poll.
 pub fn wake() {
     WOKEN.store(true, Ordering::Release);
+}
+
+/// Ends the main loop's sleep, to start reading a converter.
+pub fn nudge() {
+    NUDGED.store(true, Ordering::Release);
 }
 
 /// Sleeps, and keeps the books on it.
@@ -39,14 +46,18 @@ impl Sleep {
         Self { span_start_us: now_us(), asleep_us: 0, share: None }
     }
 
-    /// Sleeps until a handler ran since the last call returned.
-    pub fn until_woken(&mut self) {
+    /// Sleeps until a handler has called; tells whether a poll is due.
+    pub fn until_woken(&mut self) -> bool {
         let begin = now_us();
-        while !WOKEN.load(Ordering::Acquire) {
+        while !WOKEN.load(Ordering::Acquire) && !NUDGED.load(Ordering::Acquire) {
             cortex_m::asm::wfe();
         }
         // Cleared before the loop looks at its inputs: what comes in from here on wakes it again.
-        WOKEN.store(false, Ordering::Release);
+        NUDGED.store(false, Ordering::Release);
+        let woken = WOKEN.load(Ordering::Acquire);
+        if woken {
+            WOKEN.store(false, Ordering::Release);
+        }
         let end = now_us();
         self.asleep_us += end - begin;
         let span = end - self.span_start_us;
@@ -55,6 +66,7 @@ impl Sleep {
             self.asleep_us = 0;
             self.span_start_us = end;
         }
+        woken
     }
 
     /// Share of time asleep over the last tenth of a second, per mille.
