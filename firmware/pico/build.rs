@@ -13,4 +13,7 @@ fn main() {
         return;
     }
     println!("cargo:rustc-link-search={}", out.display());
+    if env::var_os("CARGO_FEATURE_DEFMT").is_some() {
+        println!("cargo:rustc-link-arg=-Tdefmt.x");
+    }
 }

@@ -139,6 +139,16 @@ export class World {
     this.lowerOutputs();
   }
 
+  /** Sends bytes to the board's UART, at the pace of its baud rate. */
+  uartSend(bytes) {
+    const byteNs = 1e10 / 921600;
+    this.uartFree = Math.max(this.uartFree ?? 0, this.now);
+    for (const byte of bytes) {
+      this.uartFree += byteNs;
+      this.agenda.at(this.uartFree, () => this.chip?.uart[0].feedByte(byte));
+    }
+  }
+
   keepFlash() {
     this.flashContent.set(this.chip.flash.subarray(0, this.flashContent.length));
   }
