@@ -1,0 +1,11 @@
+//! Where frames come from, and what is known of their exposures.
+
+mod exif;
+mod exposure;
+mod folder;
+pub mod lamp;
+mod picture;
+
+pub use exposure::{exposure_of, shutter_seconds};
+pub use folder::{FolderError, FrameFolder, watch};
+pub use picture::{Picture, PictureError, read_picture};
