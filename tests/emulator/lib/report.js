@@ -5,7 +5,7 @@ let failures = 0;
 /** Prints a check's line. */
 export function check(name, ok, figures) {
   if (!ok) failures++;
-  console.log(`${ok ? 'ok    ' : 'FAILED'}  ${name}: ${figures}`);
+  console.log(`${ok ? 'ok' : 'FAILED'}: ${name}: ${figures}`);
 }
 
 /** Runs a group of checks; an error in it is a failure, not the end of the others. */
@@ -14,7 +14,7 @@ export async function group(name, action) {
     await action();
   } catch (error) {
     failures++;
-    console.log(`FAILED  ${name}: ${error.message}`);
+    console.log(`FAILED: ${name}: ${error.message}`);
     if (process.env.RINGVOLT_TRACE) console.log(error.stack);
   }
 }

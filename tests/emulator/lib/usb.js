@@ -12,6 +12,10 @@ const setConfiguration = (value) => setup(0x00, 9, value, 0, 0);
 const setControlLines = (lines) => setup(0x21, 0x22, lines, 0, 0);
 const CONFIGURATION_HEAD = 9;
 
+/** A device has 2 ms to take its address (USB 2.0, 9.2.6.3); between other requests a host leaves a frame or so. */
+const ADDRESS_NS = 2e6;
+const REQUEST_NS = 1e6;
+
 /** Numbers of the bulk endpoints in a configuration's descriptors. */
 function bulkEndpoints(descriptors) {
   const found = {};
@@ -23,13 +27,15 @@ function bulkEndpoints(descriptors) {
 }
 
 export class UsbHost {
-  constructor() {
+  constructor(world) {
+    this.world = world;
     this.onBytes = () => {};
     this.onUp = () => {};
     this.onDown = () => {};
     this.plugged = true;
     this.reading = true;
     this.toBoard = [];
+    this.heldReads = new Map();
     this.detach();
   }
 
@@ -37,7 +43,7 @@ export class UsbHost {
     this.onDown();
     this.up = false;
     this.toBoard.length = 0;
-    this.heldRead = 0;
+    this.heldReads = new Map();
     this.heldPackets = [];
     this.state = 'off';
     this.controller = null;
@@ -53,8 +59,8 @@ export class UsbHost {
     usb.onResetReceived = () => this.enumerate();
     usb.onEndpointWrite = (endpoint, bytes) => this.fromBoard(endpoint, bytes);
     usb.onEndpointRead = (endpoint, size) => {
-      if (endpoint !== this.out) return;
-      this.heldRead = size;
+      // The board offers its buffers before the host has read which endpoint is the serial port's.
+      this.heldReads.set(endpoint, size);
       this.feed();
     };
     const original = usb.DPRAMUpdated.bind(usb);
@@ -82,15 +88,22 @@ export class UsbHost {
     else if (endpoint === this.in && this.up) this.onBytes(bytes);
   }
 
+  // Sends a request after a pause, unless the board was reset meanwhile.
+  request(packet, pause = REQUEST_NS) {
+    const { controller, world } = this;
+    world.agenda.at(world.now + pause, () => {
+      if (this.controller === controller && this.plugged) controller.sendSetupPacket(packet);
+    });
+  }
+
   control(bytes) {
-    const { controller } = this;
     if (this.state === 'address' && bytes.length === 0) {
       this.state = 'head';
-      controller.sendSetupPacket(getConfiguration(CONFIGURATION_HEAD));
+      this.request(getConfiguration(CONFIGURATION_HEAD), ADDRESS_NS);
     } else if (this.state === 'head' && bytes.length === CONFIGURATION_HEAD) {
       this.state = 'descriptors';
       this.total = bytes[2] | (bytes[3] << 8);
-      controller.sendSetupPacket(getConfiguration(this.total));
+      this.request(getConfiguration(this.total));
     } else if (this.state === 'descriptors' && bytes.length) {
       this.descriptors.push(...bytes);
       if (this.descriptors.length < this.total) return;
@@ -98,10 +111,12 @@ export class UsbHost {
       this.in = endpoints.in;
       this.out = endpoints.out;
       this.state = 'configuration';
-      controller.sendSetupPacket(setConfiguration(1));
+      this.request(setConfiguration(1));
     } else if (this.state === 'configuration' && bytes.length === 0) {
+      this.state = 'lines';
+      this.request(setControlLines(3));
+    } else if (this.state === 'lines' && bytes.length === 0) {
       this.state = 'up';
-      controller.sendSetupPacket(setControlLines(3));
       this.up = true;
       this.onUp();
       this.feed();
@@ -115,9 +130,10 @@ export class UsbHost {
   }
 
   feed() {
-    if (!this.up || !this.plugged || !this.heldRead || !this.toBoard.length) return;
-    const bytes = Uint8Array.from(this.toBoard.splice(0, Math.min(64, this.heldRead)));
-    this.heldRead = 0;
+    const room = this.heldReads.get(this.out);
+    if (!this.up || !this.plugged || !room || !this.toBoard.length) return;
+    const bytes = Uint8Array.from(this.toBoard.splice(0, Math.min(64, room)));
+    this.heldReads.delete(this.out);
     this.controller.endpointReadDone(this.out, bytes);
   }
 
@@ -142,7 +158,7 @@ export class UsbHost {
     }
     this.up = false;
     this.heldPackets = [];
-    this.heldRead = 0;
+    this.heldReads = new Map();
     this.controller?.resetDevice();
   }
 }

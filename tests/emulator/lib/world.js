@@ -64,7 +64,7 @@ export class World {
     this.converters.sense.ready = (high) => this.setPin(8, high);
     this.converters.cross.ready = (high) => this.setPin(9, high);
     this.rom = new FlashRom(this);
-    this.usb = new UsbHost();
+    this.usb = new UsbHost(this);
     this.onUartByte = () => {};
     this.onBoot = () => {};
   }
