@@ -128,7 +128,7 @@ pub enum ResetCause {
 
 /// A latched cause that withdraws the permit. Append only: the number is stored and exported.
 ///
-/// The firmware's trip table holds each one's detection, action, sentence and way to clear.
+/// [`TRIPS`](crate::TRIPS) holds each one's detection, sentence and way to clear.
 #[derive(Clone, Copy, Debug, PartialEq, Eq, Hash, Serialize, Deserialize, MaxSize)]
 #[non_exhaustive]
 pub enum Trip {

@@ -16,10 +16,12 @@
 
 pub mod event;
 pub mod framing;
+pub mod lamp;
 pub mod message;
 pub mod reading;
 pub mod record;
 pub mod status;
+pub mod trips;
 
 pub use event::{Event, EventKind, Line, ResetCause, Trip, TripSet};
 pub use framing::{Decoder, DecoderCounts, EncodeError, MAX_FRAME, encode};
@@ -29,6 +31,7 @@ pub use message::{
 pub use reading::{Reading, ReadingFlags, WindowCodes};
 pub use record::{CertificateHash, CertificateRecord, CodeToVolts, LampSettings, Polarity, SettingsRecord};
 pub use status::{Contacts, PermitState, Status};
+pub use trips::{TRIPS, TripRow};
 
 /// The version of the wire this crate speaks. A peer of another version is refused, in words, at the hello.
 pub const PROTOCOL_VERSION: u16 = 1;

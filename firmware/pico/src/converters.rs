@@ -4,22 +4,15 @@
 //! [`Converter::finish`] collects. Only setting up and checking, once a second, wait for the bus.
 
 use heapless::Vec;
-use ringvolt_firmware::io::{Channel, Conversion, ConverterNotice};
+use ringvolt_firmware::{
+    converter::{Care, Converter as _, ads1115::Ads1115},
+    io::{Channel, Conversion, ConverterNotice},
+};
 
 use crate::{
     bus::{BusError, PatientBus},
     clock::now_us,
 };
-
-/// Registers and bits as in the data sheets of the ADS111x converters.
-mod part {
-    pub const RESULT: u8 = 0;
-    pub const CONFIGURATION: u8 = 1;
-    pub const LOW: u8 = 2;
-    pub const HIGH: u8 = 3;
-    /// Input 0 against input 1, full scale 2.048 V, continuous, 860 a second, ready pin on each conversion.
-    pub const SETTING: u16 = 0x8000 | (2 << 9) | (7 << 5);
-}
 
 /// A converter that could not be set up is tried again after this long, microseconds.
 const RETRY_US: u64 = 50_000;
@@ -105,26 +98,22 @@ impl<B: PatientBus> Converter<B> {
         }
     }
 
+    fn driver(&mut self) -> Ads1115<&mut B> {
+        Ads1115::new(&mut self.bus, self.address, self.channel)
+    }
+
     fn set_up(&mut self, now_us: u64) -> Result<(), BusError> {
-        let [high, low] = part::SETTING.to_be_bytes();
-        self.bus.write(self.address, &[part::LOW, 0x00, 0x00])?;
-        self.bus.write(self.address, &[part::HIGH, 0x80, 0x00])?;
-        self.bus.write(self.address, &[part::CONFIGURATION, high, low])?;
-        self.bus.write(self.address, &[part::RESULT])?;
+        self.driver().set_up()?;
         self.state = State::Running { check_us: now_us + CHECK_US };
         Ok(())
     }
 
     fn check(&mut self, now_us: u64, round: &mut Round) -> Result<(), BusError> {
-        let mut setting = [0; 2];
-        self.bus.write_read(self.address, &[part::CONFIGURATION], &mut setting)?;
-        if u16::from_be_bytes(setting) | 0x8000 == part::SETTING {
-            self.bus.write(self.address, &[part::RESULT])?;
-            self.state = State::Running { check_us: now_us + CHECK_US };
-            return Ok(());
+        if self.driver().look_after()? == Care::Repaired {
+            let _ = round.notices.push(ConverterNotice::ConfigurationRepaired(self.channel));
         }
-        let _ = round.notices.push(ConverterNotice::ConfigurationRepaired(self.channel));
-        self.set_up(now_us)
+        self.state = State::Running { check_us: now_us + CHECK_US };
+        Ok(())
     }
 
     fn failed(&mut self, error: BusError, round: &mut Round) {

@@ -4,7 +4,7 @@
 //! other port meanwhile hears that the controller is busy. A host that has said nothing for [`RELEASE_US`] has left.
 //! Noise on an unconnected port is no host: nothing but whole frames counts.
 
-use ringvolt_firmware::Controller;
+use ringvolt_firmware::{Controller, Journal};
 use ringvolt_protocol::{Decoder, MAX_FRAME, ToDevice, ToHost, encode};
 
 use crate::{uart::Uart, usb::Usb};
@@ -79,7 +79,7 @@ impl<'a> Link<'a> {
     }
 
     /// Gives the served host what waits for it.
-    pub fn send(&mut self, controller: &mut Controller) {
+    pub fn send(&mut self, controller: &mut Controller<&mut Journal>) {
         let Some(port) = self.served else { return };
         let waiting = controller.outgoing();
         if waiting.is_empty() {

@@ -29,7 +29,7 @@ mod watchdog;
 #[cfg(feature = "defmt")]
 use defmt_rtt as _;
 use ringvolt_firmware::{
-    Controller,
+    Controller, Journal,
     io::{Boot, Channel, Inputs},
 };
 use ringvolt_protocol::DeviceKind;
@@ -63,6 +63,9 @@ use crate::{
 #[unsafe(no_mangle)]
 #[used]
 static BOOT2_FIRMWARE: [u8; 256] = rp2040_boot2::BOOT_LOADER_W25Q080;
+
+/// Three quarters of the RAM; static, since the stack could not hold it even for a moment.
+static mut JOURNAL: Journal = Journal::new();
 
 const CRYSTAL_HZ: u32 = 12_000_000;
 
@@ -135,7 +138,10 @@ fn main() -> ! {
         certificate: records::certificate(&mut flash),
         settings: records::settings(&mut flash),
     };
-    let mut controller = Controller::new(boot);
+    // SAFETY: `main` runs once, and this is the only place that names the journal.
+    #[allow(unsafe_code)]
+    let journal = unsafe { &mut *(&raw mut JOURNAL) };
+    let mut controller = Controller::new(boot, journal);
 
     let mut serial_number = [0; 16];
     let serial_number = hex(&device, &mut serial_number);

@@ -23,6 +23,9 @@ pub struct Certificate {
     pub valid_until: String,
     /// Who made it.
     pub operator: String,
+    /// What a reader must know: doubts that were accepted and why.
+    #[serde(skip_serializing_if = "Vec::is_empty", default)]
+    pub remarks: Vec<String>,
     /// What it was compared with.
     pub reference: Reference,
     /// Surroundings.
@@ -115,4 +118,7 @@ pub struct Point {
     /// Enclosure temperature, degrees Celsius, where measured.
     #[serde(skip_serializing_if = "Option::is_none", default)]
     pub enclosure_celsius: Option<f64>,
+    /// Why the point was left out of the fit; it stays in the table.
+    #[serde(skip_serializing_if = "Option::is_none", default)]
+    pub left_out: Option<String>,
 }

@@ -29,8 +29,8 @@ fn within(field: &str, value: f64, range: RangeInclusive<f64>, unit: &str) -> Ch
 }
 
 fn line_of_text(field: &str, value: &str, may_be_empty: bool) -> Checked {
-    if value.chars().count() > 200 || value.chars().any(char::is_control) {
-        return Err(fault(field, "must be one line of at most 200 characters"));
+    if value.chars().count() > 300 || value.chars().any(char::is_control) {
+        return Err(fault(field, "must be one line of at most 300 characters"));
     }
     if value.trim().is_empty() && !may_be_empty {
         return Err(fault(field, "is empty; say who or what it is"));
@@ -44,6 +44,13 @@ pub(super) fn day(text: &str) -> Option<i64> {
     let date: Date = (text.len() == 10).then(|| text.parse().ok())??;
     let epoch = jiff::civil::date(1970, 1, 1);
     (1970..2200).contains(&date.year()).then(|| i64::from((date - epoch).get_days()))
+}
+
+/// `YYYY-MM-DD` of days since 1970-01-01, from 1970 to 2199.
+pub(super) fn day_text(days: i64) -> Option<String> {
+    let days = i32::try_from(days).ok().filter(|days| (0..84_006).contains(days))?;
+    let date = jiff::civil::date(1970, 1, 1).checked_add(jiff::Span::new().days(days)).ok()?;
+    Some(date.to_string())
 }
 
 /// Checks everything but the hash's value.
@@ -74,6 +81,10 @@ fn identities(certificate: &Certificate) -> Checked {
     }
     line_of_text("bench", &certificate.bench, false)?;
     line_of_text("operator", &certificate.operator, false)?;
+    if certificate.remarks.len() > 20 {
+        return Err(fault("remarks", "has more than 20 entries"));
+    }
+    certificate.remarks.iter().try_for_each(|remark| line_of_text("remarks", remark, false))?;
     line_of_text("reference.identity", &certificate.reference.identity, false)?;
     line_of_text("reference.certificate", &certificate.reference.certificate, true)?;
     let issued = day(&certificate.issued).ok_or_else(|| fault("issued", "must be a day, YYYY-MM-DD"))?;
@@ -176,6 +187,7 @@ fn point(index: usize, point: &Point) -> Checked {
     if !["zero", "up", "down"].contains(&point.direction.as_str()) {
         return Err(fault(&field("direction"), "must be zero, up or down"));
     }
+    line_of_text(&field("left_out"), point.left_out.as_deref().unwrap_or_default(), true)?;
     within(&field("reference_volts"), point.reference_volts, -50_000.0..=50_000.0, "V")?;
     within(&field("sense_code"), point.sense_code, -32_768.0..=32_767.0, "codes")?;
     within(&field("cross_code"), point.cross_code, -32_768.0..=32_767.0, "codes")?;

@@ -28,6 +28,7 @@ pub fn example() -> Certificate {
         // Long, so that the demonstration does not expire under someone's hands; a real one has a year.
         valid_until: "2031-12-31".to_owned(),
         operator: "Nobody: SIMULATED".to_owned(),
+        remarks: Vec::new(),
         reference: Reference {
             identity: "Invented reference divider and voltmeter, SIMULATED".to_owned(),
             certificate: "none, SIMULATED".to_owned(),
@@ -85,6 +86,7 @@ fn point(rng: &mut ChaCha8Rng, time: Timestamp, direction: &str, step: u32) -> P
         sense_code: code(rng, SENSE),
         cross_code: code(rng, CROSS),
         enclosure_celsius: Some(23.0),
+        left_out: None,
     }
 }
 

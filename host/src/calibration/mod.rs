@@ -1,14 +1,38 @@
 //! Certificates, the procedure that makes them, and the chart that watches over them.
 
 mod apply;
+mod assess;
 mod certificate;
+pub mod chart;
 mod check;
 mod example;
+mod fit;
+mod guide;
+mod html;
+mod issue;
+mod least_squares;
+mod plan;
+pub mod plot;
+mod reference;
 mod seal;
+mod session;
+mod settling;
+mod source;
+mod suspect;
 #[cfg(test)]
 mod tests;
 
 pub use apply::{Channel, Outside, RecordError, UncertaintyPart, Validity, combined_volts, day_of_utc_ns};
+pub use assess::{Assessment, Finding, Hysteresis, Severity, assess};
 pub use certificate::{Certificate, ChannelFit, Conditions, Point, Reference, Stability};
 pub use example::example;
+pub use fit::{FTest, FitError, FitReport, Residual, TemperatureTerm, fit};
+pub use guide::{End, Guide, GuideError, Talk};
+pub use html::certificate_page;
+pub use issue::{IssueDetails, IssueError, issue};
+pub use plan::{Direction, PlanError, Step, plan};
+pub use reference::{Answer, Metered, ReferenceSource, Typed, parse_typed_volts};
 pub use seal::{CertificateError, MAX_CERTIFICATE_BYTES};
+pub use session::{Header, Outcome, Session, SessionError};
+pub use settling::{Settling, SettlingRules, SettlingWatch};
+pub use source::{CodeEvent, CodeSource, Codes, CsvSource, SourceError};

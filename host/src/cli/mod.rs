@@ -6,6 +6,7 @@ use std::process::ExitCode;
 
 use clap::{Parser, Subcommand};
 
+mod bench;
 mod failure;
 
 pub use failure::Failure;
@@ -21,7 +22,10 @@ pub struct Cli {
 
 /// The commands.
 #[derive(Debug, Subcommand)]
-pub enum Command {}
+pub enum Command {
+    /// Check, begin or explain a bench profile: the file that describes one bench.
+    Bench(bench::Args),
+}
 
 /// Parses the command line, carries it out and gives the exit code: 0 done, 1 failed with a stated reason, 2 wrong usage.
 pub fn main() -> ExitCode {
@@ -36,5 +40,7 @@ pub fn main() -> ExitCode {
 }
 
 fn dispatch(command: &Command) -> Result<(), Failure> {
-    match *command {}
+    match command {
+        Command::Bench(args) => bench::run(args),
+    }
 }

@@ -5,8 +5,21 @@
 
 use std::path::PathBuf;
 
+mod field;
+mod parse;
+mod settings;
+#[cfg(test)]
+mod tests;
+mod write;
+
+pub use field::{FIELDS, Field, Kind, Presence, TABLES};
+pub(crate) use parse::check_answer;
+pub use parse::{Fault, MAX_PROFILE_BYTES, ProfileError};
+pub use settings::SettingsError;
+pub use write::{commented, example, explain};
+
 /// One bench, as its profile describes it. Every value has passed its range check.
-#[derive(Clone, Debug, PartialEq)]
+#[derive(Clone, Debug, Default, PartialEq)]
 pub struct Profile {
     /// What people call the bench.
     pub bench: Bench,
@@ -25,7 +38,7 @@ pub struct Profile {
 }
 
 /// `[bench]`
-#[derive(Clone, Debug, PartialEq)]
+#[derive(Clone, Debug, Default, PartialEq)]
 pub struct Bench {
     /// Name on reports.
     pub name: String,
@@ -34,7 +47,7 @@ pub struct Bench {
 }
 
 /// `[tube]`
-#[derive(Clone, Debug, PartialEq)]
+#[derive(Clone, Debug, Default, PartialEq)]
 pub struct Tube {
     /// `graphite`, `gold`, `aluminium`: a lattice the physics module knows.
     pub material: String,
@@ -62,17 +75,22 @@ pub struct Tube {
 }
 
 /// The shape of the luminescent screen.
-#[derive(Clone, Copy, Debug, PartialEq, Eq)]
+#[derive(Clone, Copy, Debug, Default, PartialEq, Eq)]
 pub enum ScreenShape {
     /// Flat, perpendicular to the axis.
+    #[default]
     Flat,
     /// The inside of a spherical bulb.
     Bulb,
 }
 
 /// `[divider]`
-#[derive(Clone, Debug, PartialEq)]
+#[derive(Clone, Debug, Default, PartialEq)]
 pub struct Divider {
+    /// What one code of the main sense should be worth by design, volts: for checks before there is a certificate.
+    pub nominal_volts_per_code: f64,
+    /// The same of the cross-sense, volts.
+    pub nominal_cross_volts_per_code: f64,
     /// Time constant of the filter at the tap, seconds: readings lag the tube by this.
     pub filter_seconds: f64,
     /// Its standard uncertainty, seconds.
@@ -80,7 +98,7 @@ pub struct Divider {
 }
 
 /// `[controller]`
-#[derive(Clone, Debug, PartialEq)]
+#[derive(Clone, Debug, Default, PartialEq)]
 pub struct ControllerSettings {
     /// The board's identity, sixteen hexadecimal digits, or empty where any board is accepted.
     pub device: String,
@@ -107,7 +125,7 @@ pub struct ControllerSettings {
 }
 
 /// `[camera]`
-#[derive(Clone, Debug, PartialEq)]
+#[derive(Clone, Debug, Default, PartialEq)]
 pub struct Camera {
     /// Where the exposure interval comes from.
     pub time_source: TimeSource,
@@ -129,14 +147,17 @@ pub struct Camera {
     pub pixels_per_mm: f64,
     /// Its relative standard uncertainty.
     pub pixels_per_mm_u_relative: f64,
+    /// Length of one chip of the sync lamp's sequence, seconds.
+    pub lamp_chip_seconds: f64,
     /// Distance from the camera's pupil to the screen's apex, millimetres; 0 where unknown.
     pub distance_mm: f64,
 }
 
 /// Where the exposure interval comes from.
-#[derive(Clone, Copy, Debug, PartialEq, Eq)]
+#[derive(Clone, Copy, Debug, Default, PartialEq, Eq)]
 pub enum TimeSource {
     /// EXIF tags in the file.
+    #[default]
     Exif,
     /// The file's time of modification is the end of the exposure.
     FileTime,
@@ -149,14 +170,14 @@ pub enum TimeSource {
 }
 
 /// `[calibration]`
-#[derive(Clone, Debug, PartialEq)]
+#[derive(Clone, Debug, Default, PartialEq)]
 pub struct CalibrationFiles {
     /// The certificate, resolved against the profile's folder.
     pub certificate: PathBuf,
 }
 
 /// `[limits]`: FIELD rules of refusing and marking.
-#[derive(Clone, Debug, PartialEq)]
+#[derive(Clone, Debug, Default, PartialEq)]
 pub struct Limits {
     /// Refuse when mains-cycle means move by more than this fraction within an exposure.
     pub span_refuse_fraction: f64,
