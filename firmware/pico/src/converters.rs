@@ -52,6 +52,14 @@ pub struct Round {
     pub notices: Vec<ConverterNotice, ROUND_NOTICES>,
 }
 
+impl Round {
+    /// Forgets it all: the next round begins.
+    pub fn clear(&mut self) {
+        self.conversions.clear();
+        self.notices.clear();
+    }
+}
+
 impl<B: PatientBus> Converter<B> {
     /// A converter that is still to be set up.
     pub fn new(channel: Channel, address: u8, bus: B) -> Self {

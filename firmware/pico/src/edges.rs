@@ -40,29 +40,27 @@ const LINES: [(u32, Line); 6] = [
     (15, Line::Comparator),
 ];
 
+#[inline(always)]
 const fn nibble(pin: u32, bits: u32) -> u32 {
     bits << (4 * (pin - FIRST_PIN))
 }
 
-const fn ready_mask() -> u32 {
-    nibble(8, EDGE_LOW) | nibble(9, EDGE_LOW)
-}
-
-const fn line_mask() -> u32 {
-    let both = EDGE_LOW | EDGE_HIGH;
-    nibble(10, both) | nibble(11, both) | nibble(12, both) | nibble(13, both) | nibble(14, both) | nibble(15, both)
-}
+const BOTH: u32 = EDGE_LOW | EDGE_HIGH;
+const READY_MASK: u32 = nibble(8, EDGE_LOW) | nibble(9, EDGE_LOW);
+const LINE_MASK: u32 =
+    nibble(10, BOTH) | nibble(11, BOTH) | nibble(12, BOTH) | nibble(13, BOTH) | nibble(14, BOTH) | nibble(15, BOTH);
 
 #[derive(Debug, Default)]
 struct Caught {
-    edges: Vec<Edge, CAPACITY>,
+    edges: Edges,
     ready_us: [Option<u64>; 2],
 }
 
+/// Edges of the input lines, oldest first.
+pub type Edges = Vec<Edge, CAPACITY>;
+
 /// One look at the pins.
 pub struct Sample {
-    /// Edges of the input lines since the last look, oldest first.
-    pub edges: Vec<Edge, CAPACITY>,
     /// Levels now.
     pub contacts: Contacts,
     /// Level of the over-voltage comparator's pin now.
@@ -81,7 +79,7 @@ pub fn start() {
     unsafe {
         // Edges of the time when the pins were being set up mean nothing.
         io.intr(BANK).write(|w| w.bits(u32::MAX));
-        io.proc0_inte(BANK).write(|w| w.bits(ready_mask() | line_mask()));
+        io.proc0_inte(BANK).write(|w| w.bits(READY_MASK | LINE_MASK));
         pac::NVIC::unmask(pac::Interrupt::IO_IRQ_BANK0);
     }
 }
@@ -91,17 +89,20 @@ pub fn take_ready() -> [Option<u64>; 2] {
     critical_section::with(|token| core::mem::take(&mut CAUGHT.borrow_ref_mut(token).ready_us))
 }
 
-/// Takes the edges that were caught, with the levels and the time of this moment.
-pub fn take() -> Sample {
+/// Moves the edges that were caught into `edges`, which it empties first; gives the levels and the time of this moment.
+pub fn take(edges: &mut Edges) -> Sample {
+    edges.clear();
     critical_section::with(|token| {
-        let edges = core::mem::take(&mut CAUGHT.borrow_ref_mut(token).edges);
-        if edges.is_full() {
+        let mut caught = CAUGHT.borrow_ref_mut(token);
+        if caught.edges.is_full() {
             allow_lines(true);
         }
+        // Only what is there, since the list is large and nearly always empty; it fits, being of the same capacity.
+        let _ = edges.extend_from_slice(&caught.edges);
+        caught.edges.clear();
         let levels = levels();
         let high = |pin: u32| levels & (1 << pin) != 0;
         Sample {
-            edges,
             contacts: Contacts {
                 loop_a_closed: high(10),
                 loop_b_closed: high(11),
@@ -131,7 +132,7 @@ fn levels() -> u32 {
 
 /// With `false`, the lines' edges no longer interrupt; their levels are still sampled by every poll.
 fn allow_lines(yes: bool) {
-    let mask = if yes { ready_mask() | line_mask() } else { ready_mask() };
+    let mask = if yes { READY_MASK | LINE_MASK } else { READY_MASK };
     // SAFETY: plain enable bits, written by this module alone with interrupts off.
     #[allow(unsafe_code)]
     io_bank().proc0_inte(BANK).write(|w| unsafe { w.bits(mask) });
@@ -143,6 +144,9 @@ impl Caught {
             if flags & nibble(pin, EDGE_LOW) != 0 {
                 self.ready_us[index] = Some(time_us);
             }
+        }
+        if flags & LINE_MASK == 0 {
+            return;
         }
         for (pin, line) in LINES {
             let fell = flags & nibble(pin, EDGE_LOW) != 0;
@@ -177,7 +181,7 @@ fn IO_IRQ_BANK0() {
             allow_lines(false);
         }
     });
-    if flags & line_mask() == 0 {
+    if flags & LINE_MASK == 0 {
         wake::nudge();
     } else {
         wake::wake();

@@ -4,6 +4,7 @@
 //! other port meanwhile hears that the controller is busy. A host that has said nothing for [`RELEASE_US`] has left.
 //! Noise on an unconnected port is no host: nothing but whole frames counts.
 
+use heapless::Vec;
 use ringvolt_firmware::{Controller, Journal};
 use ringvolt_protocol::{Decoder, MAX_FRAME, ToDevice, ToHost, encode};
 
@@ -16,7 +17,7 @@ const RELEASE_US: u64 = 5_000_000;
 const BUSY_INTERVAL_US: u64 = 200_000;
 
 /// Most bytes that one round takes from a port: more would make the round long.
-pub const ROUND_BYTES: usize = 128;
+const ROUND_BYTES: usize = 128;
 
 #[derive(Clone, Copy, PartialEq, Eq)]
 enum Port {
@@ -39,43 +40,44 @@ pub struct Link<'a> {
     /// Finds whole frames in what the served host says, to know that it is still there.
     witness: Decoder,
     listeners: [Listener; 2],
+    /// What the served host has said this round.
+    received: Vec<u8, { ROUND_BYTES + MAX_FRAME }>,
+    /// What a port has just given.
+    bytes: [u8; ROUND_BYTES],
 }
 
 impl<'a> Link<'a> {
     /// A link on whichever ports there are.
     pub fn new(usb: Option<Usb<'a>>, uart: Option<Uart>) -> Self {
         let listener = || Listener { decoder: Decoder::new(), busy_sent_us: None };
-        Self { usb, uart, served: None, heard_us: 0, witness: Decoder::new(), listeners: [listener(), listener()] }
+        Self {
+            usb,
+            uart,
+            served: None,
+            heard_us: 0,
+            witness: Decoder::new(),
+            listeners: [listener(), listener()],
+            received: Vec::new(),
+            bytes: [0; ROUND_BYTES],
+        }
     }
 
-    /// Takes what came in on both ports; the served host's bytes go into `received`, how many is returned.
-    pub fn receive(&mut self, now_us: u64, received: &mut [u8; ROUND_BYTES]) -> usize {
+    /// Takes what came in on both ports, and gives the served host's bytes.
+    pub fn receive(&mut self, now_us: u64) -> &[u8] {
+        self.received.clear();
         if let Some(usb) = &mut self.usb {
             usb.serve();
         }
         if self.served.is_some() && now_us.saturating_sub(self.heard_us) > RELEASE_US {
             self.served = None;
         }
-        let mut count = 0;
         for port in [Port::Usb, Port::Uart] {
-            let mut bytes = [0; ROUND_BYTES];
-            let taken = self.read(port, &mut bytes);
-            if taken == 0 {
-                continue;
-            }
-            if self.served == Some(port) {
-                for byte in &bytes[..taken] {
-                    if self.witness.push::<ToDevice>(*byte).is_some() {
-                        self.heard_us = now_us;
-                    }
-                }
-                received[..taken].copy_from_slice(&bytes[..taken]);
-                count = taken;
-            } else {
-                count = self.listen(port, now_us, &bytes[..taken], received).unwrap_or(count);
+            let count = self.read(port);
+            for index in 0..count {
+                self.hear(port, now_us, self.bytes[index]);
             }
         }
-        count
+        &self.received
     }
 
     /// Gives the served host what waits for it.
@@ -92,36 +94,37 @@ impl<'a> Link<'a> {
         controller.sent(count);
     }
 
-    fn read(&mut self, port: Port, bytes: &mut [u8]) -> usize {
+    /// Reads a port into `bytes`; how many.
+    fn read(&mut self, port: Port) -> usize {
         match port {
-            Port::Usb => self.usb.as_mut().map_or(0, |usb| usb.read(bytes)),
-            Port::Uart => self.uart.as_mut().map_or(0, |uart| uart.read(bytes)),
+            Port::Usb => self.usb.as_mut().map_or(0, |usb| usb.read(&mut self.bytes)),
+            Port::Uart => self.uart.as_mut().map_or(0, |uart| uart.read(&mut self.bytes)),
         }
     }
 
-    /// Hears a port that is not served. Its first whole message makes it the served one if there is none; that message
-    /// and the bytes behind it are then the controller's.
-    fn listen(&mut self, port: Port, now_us: u64, bytes: &[u8], received: &mut [u8; ROUND_BYTES]) -> Option<usize> {
-        for (index, byte) in bytes.iter().enumerate() {
-            let listener = &mut self.listeners[port as usize];
-            let Some(message) = listener.decoder.push::<ToDevice>(*byte) else { continue };
-            if self.served.is_some() {
-                self.say_busy(port, now_us);
-                continue;
+    /// One byte from a port. The served host's is passed on; another's first whole message makes that host the served
+    /// one if there is none, and is passed on whole.
+    fn hear(&mut self, port: Port, now_us: u64, byte: u8) {
+        if self.served == Some(port) {
+            if self.witness.push::<ToDevice>(byte).is_some() {
+                self.heard_us = now_us;
             }
-            self.served = Some(port);
-            self.heard_us = now_us;
-            self.witness = Decoder::new();
-            let mut frame = [0; MAX_FRAME];
-            let Ok(length) = encode(&message, &mut frame) else { return None };
-            let rest = &bytes[index + 1..];
-            // A first message longer than a round (a record, before any hello) is left for the host to repeat.
-            let whole = received.get_mut(..length + rest.len())?;
-            whole[..length].copy_from_slice(&frame[..length]);
-            whole[length..].copy_from_slice(rest);
-            return Some(length + rest.len());
+            // There is room: a port gives at most ROUND_BYTES, and at most one message is passed on whole.
+            let _ = self.received.push(byte);
+            return;
         }
-        None
+        let Some(message) = self.listeners[port as usize].decoder.push::<ToDevice>(byte) else { return };
+        if self.served.is_some() {
+            self.say_busy(port, now_us);
+            return;
+        }
+        self.served = Some(port);
+        self.heard_us = now_us;
+        self.witness = Decoder::new();
+        let mut frame = [0; MAX_FRAME];
+        if let Ok(length) = encode(&message, &mut frame) {
+            let _ = self.received.extend_from_slice(&frame[..length]);
+        }
     }
 
     fn say_busy(&mut self, port: Port, now_us: u64) {

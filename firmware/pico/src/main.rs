@@ -47,8 +47,9 @@ use crate::{
     analog::Slow,
     bus::{Bus, PatientBus},
     converters::{Converter, Round},
+    edges::Edges,
     flash::Flash,
-    link::{Link, ROUND_BYTES},
+    link::Link,
     pins::{Driven, Fitted},
     uart::Uart,
     usb::Usb,
@@ -176,6 +177,7 @@ fn main() -> ! {
     edges::start();
     let mut sleep = Sleep::new(core.SYST, clocks.system_clock.freq().to_Hz());
     dog.alert();
+    let mut edges = Edges::new();
     let mut stored = None;
     loop {
         if !sleep.until_woken() {
@@ -184,20 +186,19 @@ fn main() -> ! {
         }
         #[cfg(feature = "dead-loop")]
         while embedded_hal::digital::InputPin::is_high(&mut deadly).unwrap_or(false) {}
-        let sample = edges::take();
+        let sample = edges::take(&mut edges);
         sense.finish(&mut round);
         cross.finish(&mut round);
-        let mut received = [0; ROUND_BYTES];
-        let count = link.receive(sample.now_us, &mut received);
+        let received = link.receive(sample.now_us);
         let outputs = controller.poll(
             sample.now_us,
             &Inputs {
                 contacts: sample.contacts,
-                edges: &sample.edges,
+                edges: &edges,
                 conversions: &round.conversions,
                 notices: &round.notices,
                 optional: slow.inputs(sample.now_us, sample.comparator),
-                received: &received[..count],
+                received,
                 stored: stored.take(),
                 idle_per_mille: sleep.idle_per_mille(),
             },
@@ -208,7 +209,7 @@ fn main() -> ! {
             stored = Some(dog.patience(|| records::write(&mut flash, request)));
         }
         link.send(&mut controller);
-        round = Round::default();
+        round.clear();
         start_reading(&mut sense, &mut cross);
         // Waiting for a bus comes last, and for one bus in a round where it failed: a held bus delays the next look at the
         // interlock by less than a tick.
