@@ -3,7 +3,7 @@
 //! Windows are gathered to blocks of 100 ms (whole cycles of 50 Hz and 60 Hz mains), and blocks to half a second and a
 //! second. Everything is in millivolts and parts per million; divisions happen once a block, not once a poll.
 
-use ringvolt_protocol::{CertificateRecord, Polarity, Trip, TripSet};
+use ringvolt_protocol::{CertificateRecord, Trip, TripSet};
 
 /// Length of a block, microseconds.
 const BLOCK_US: u64 = 100_000;

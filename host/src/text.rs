@@ -70,3 +70,20 @@ pub fn line_of(text: &str, path: &str) -> Option<usize> {
     }
     Some(line_at(text, value.span().start))
 }
+
+/// A time as RFC 3339 in UTC with nine decimals and `Z`; the nearest representable one where it lies beyond the calendar.
+pub fn utc(utc_ns: i64) -> String {
+    // 64 bits of nanoseconds reach from 1677 to 2262, which the calendar holds.
+    let time = jiff::Timestamp::from_nanosecond(i128::from(utc_ns)).unwrap_or_default();
+    format!("{time:.9}")
+}
+
+#[cfg(test)]
+mod time_tests {
+    #[test]
+    fn times_have_nine_decimals_and_a_z() {
+        assert_eq!(super::utc(0), "1970-01-01T00:00:00.000000000Z");
+        assert_eq!(super::utc(1_796_113_445_123_456_789), "2026-12-01T08:24:05.123456789Z");
+        assert!(super::utc(i64::MIN).ends_with('Z'));
+    }
+}

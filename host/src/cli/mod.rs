@@ -7,7 +7,16 @@ use std::process::ExitCode;
 use clap::{Parser, Subcommand};
 
 mod bench;
+mod bench_files;
+mod demo;
+mod export;
 mod failure;
+mod live;
+mod predict;
+mod report;
+mod run;
+mod simulate;
+mod stamp;
 
 pub use failure::Failure;
 
@@ -25,6 +34,20 @@ pub struct Cli {
 pub enum Command {
     /// Check, begin or explain a bench profile: the file that describes one bench.
     Bench(bench::Args),
+    /// Do the whole job on a simulated bench, to see what it is like.
+    Demo(demo::Args),
+    /// Write a run's frames, readings and events as open tables.
+    Export(export::Args),
+    /// What a bench's tube shows at given voltages.
+    Predict(predict::Args),
+    /// Write a run's report as one HTML file.
+    Report(report::Args),
+    /// Record a session: readings, interlock and frames into a run file, stamped live.
+    Run(run::Args),
+    /// Run an invented bench behind a pseudo-terminal: controller, supply, tube and camera, all SIMULATED.
+    Simulate(simulate::Args),
+    /// Stamp every frame of a run again, from raw codes; earlier results stay in the file.
+    Stamp(stamp::Args),
 }
 
 /// Parses the command line, carries it out and gives the exit code: 0 done, 1 failed with a stated reason, 2 wrong usage.
@@ -42,5 +65,12 @@ pub fn main() -> ExitCode {
 fn dispatch(command: &Command) -> Result<(), Failure> {
     match command {
         Command::Bench(args) => bench::run(args),
+        Command::Demo(args) => demo::run(args),
+        Command::Export(args) => export::run(args),
+        Command::Predict(args) => predict::run(args),
+        Command::Report(args) => report::run(args),
+        Command::Run(args) => run::run(args),
+        Command::Simulate(args) => simulate::run(args),
+        Command::Stamp(args) => stamp::run(args),
     }
 }

@@ -1,0 +1,1 @@
+"""Netlists of the divider, their faults, and the tables made from what ngspice says."""
