@@ -20,12 +20,12 @@ export function powerCuts(image, cuts) {
   for (let i = 0; i < cuts; i++) {
     const next = (current % 250) + 1;
     // Half of the cuts anywhere from the request to well after the write, half within the short program at its end.
-    const after = i % 2 ? random.next() * (span.end + 5 * MS) : span.program + (random.next() * 1.2 - 0.1) * (span.end - span.program);
+    const after = i % 2 ? random.next() * (span.end + 5 * MS) : span.program + (random.next() * 1.5 - 0.2) * (span.end - span.program);
     const sent = world.now;
     world.powerCutAt = sent + after;
     if (after > span.erase && after < span.end) seen.within++;
     host.send({ is: 'WriteCertificate', ...certificate(device, next) });
-    while (world.chip) world.run(sent + 200 * MS);
+    bench.until('the power cut', () => world.chip === null, 300);
     const hellos = host.hellos.length;
     world.run(world.now + 20 * MS);
     world.boot(true);

@@ -107,6 +107,8 @@ export class World {
     if (scratch) watchdog.scratchData.set(scratch);
     watchdog.onWatchdogTrigger = () => {
       this.resetRequest = watchdog.reason;
+      // The reset itself comes after this instruction; until then the emulated counter must not fire again and again.
+      watchdog.alarm.enable = false;
     };
     chip.adc.onADCRead = (channel) => {
       chip.adc.currentChannel = channel;
