@@ -1,24 +1,26 @@
-// The emulated board behind TCP: `node serve.js --image FILE --scene FILE [--link PORT] [--clock PORT] [--frames DIR]`
+// The emulated board behind TCP: `node serve.js --image FILE --scene FILE [--link PORT] [--clock PORT] [--frames DIR] [--records FILE]`
 //
 // With --clock, virtual time advances as README.md's clock stream says; without, it follows the wall clock as well as the
 // machine can. Ports of 0 (the default) are chosen by the system. The first line on standard output names both; the
 // last one, when the run is over, tells what was measured. A scene's "frame" event copies its file, found beside the
-// scene, into --frames.
+// scene, into --frames. --records names what `board-records BENCH` printed: the board then starts with that certificate and
+// those settings in its flash.
 
-import { copyFileSync } from 'node:fs';
+import { copyFileSync, readFileSync } from 'node:fs';
 import { createServer } from 'node:net';
 import { dirname, join } from 'node:path';
 
+import { putRecord } from './lib/flash.js';
 import { readImage } from './lib/image.js';
 import { readScene, stage } from './lib/scene.js';
 
 const UTC_START_NS = 1764583200000000000n;
 
 function options(args) {
-  const found = { link: '0', clock: null, frames: null };
+  const found = { link: '0', clock: null, frames: null, records: null };
   for (let i = 0; i < args.length; i += 2) {
     const name = args[i].replace(/^--/, '');
-    if (!['image', 'scene', 'link', 'clock', 'frames'].includes(name) || args[i + 1] === undefined) {
+    if (!['image', 'scene', 'link', 'clock', 'frames', 'records'].includes(name) || args[i + 1] === undefined) {
       fail(`unknown or unfinished argument ${args[i]}`);
     }
     found[name] = args[i + 1];
@@ -186,7 +188,12 @@ async function main() {
   let scene;
   try {
     scene = readScene(chosen.scene);
-    world = stage(scene, readImage(chosen.image));
+    const flash = readImage(chosen.image);
+    if (chosen.records) {
+      const records = JSON.parse(readFileSync(chosen.records, 'utf8'));
+      for (const [name, hex] of Object.entries(records)) putRecord(flash, name, Buffer.from(hex, 'hex'));
+    }
+    world = stage(scene, flash);
   } catch (error) {
     fail(error.message);
   }

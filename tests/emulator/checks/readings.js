@@ -34,7 +34,7 @@ export function readings(image, dir) {
       const { sum, count } = reading[name];
       // The first tenths of a second belong to setting up, and a write to the flash stops the processor, as it says.
       if (reading.time_us < 200e3 || reading.flags & LATE) continue;
-      if (count < 7) { thin++; if (process.env.RINGVOLT_TRACE) console.log(JSON.stringify(reading)); }
+      if (count < 7) thin++;
       // Conversions that end in the window integrated from one period before it.
       const from = reading.time_us * 1e3 + bootOffsetUs * 1e3;
       const part = world.converters[name];

@@ -4,11 +4,8 @@ export class Agenda {
   constructor() {
     this.heap = [];
     this.order = 0;
-  }
-
-  /** When the next entry is due; Infinity if there is none. */
-  get next() {
-    return this.heap.length ? this.heap[0].at : Infinity;
+    /** When the next entry is due; Infinity if there is none. A plain member: it is looked at for every instruction. */
+    this.next = Infinity;
   }
 
   /** Calls `action` at `at`; entries of one time run in the order they were made. Returns a handle for `cancel`. */
@@ -22,6 +19,7 @@ export class Agenda {
       [heap[i], heap[parent]] = [heap[parent], heap[i]];
       i = parent;
     }
+    this.next = heap[0].at;
     return entry;
   }
 
@@ -47,6 +45,7 @@ export class Agenda {
         i = least;
       }
     }
+    this.next = heap.length ? heap[0].at : Infinity;
     if (first.action) first.action();
   }
 }

@@ -4,14 +4,27 @@
 // function is a breakpoint instruction that this file serves, and a return. Times are typical values of the W25Q16JV data
 // sheet: 45 ms for a sector erase, 0.4 ms for a page program.
 
+import { crc32 } from './wire.js';
+
 const ERASE_NS = 45e6;
 const PROGRAM_NS = 0.4e6;
-const UNIQUE_NUMBER = [0x52, 0x56, 0x45, 0x4d, 0x55, 0x4c, 0x30, 0x31];
 
 const TABLE = 0x40;
 const CODE = 0x100;
 const FUNCTIONS = ['IF', 'EX', 'RE', 'RP', 'FC', 'CX'];
 const LOOKUP = FUNCTIONS.length;
+
+/** Where the image keeps its records, and how: see firmware/src/store.rs and firmware/pico/src/flash.rs. */
+const FIRST_UNIT = 2 * 1024 * 1024 - 6 * 4096;
+const RECORD_UNITS = { certificate: FIRST_UNIT, settings: FIRST_UNIT + 2 * 4096 };
+
+/** Puts a record's bytes into a flash image as if the controller had stored it. */
+export function putRecord(flash, name, record) {
+  const page = [...Buffer.from('RVr1'), 1, 0, 0, 0, record.length & 0xff, record.length >> 8, ...record];
+  const crc = crc32(page);
+  page.push(crc & 0xff, (crc >>> 8) & 0xff, (crc >>> 16) & 0xff, crc >>> 24);
+  flash.set(page, RECORD_UNITS[name]);
+}
 
 /** Power went away within an erase or a program. */
 export class PowerCut extends Error {}
@@ -117,7 +130,7 @@ export class FlashRom {
   exchange(byte) {
     this.sent.push(byte);
     const at = this.sent.length - 1;
-    if (this.sent[0] === 0x4b && at >= 5) return UNIQUE_NUMBER[(at - 5) % 8];
+    if (this.sent[0] === 0x4b && at >= 5) return this.world.device[(at - 5) % 8];
     if (this.sent[0] === 0x35) return 0x02; // quad enable is set
     return 0;
   }

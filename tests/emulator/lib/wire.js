@@ -252,7 +252,8 @@ const CRC = Uint32Array.from({ length: 256 }, (_, n) => {
   return c >>> 0;
 });
 
-function crc32(content) {
+/** CRC-32 as ISO-HDLC has it. */
+export function crc32(content) {
   let c = 0xffffffff;
   for (const byte of content) c = CRC[(c ^ byte) & 0xff] ^ (c >>> 8);
   return (c ^ 0xffffffff) >>> 0;
