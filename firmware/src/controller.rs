@@ -26,8 +26,8 @@ const MOST_WINDOWS: usize = 64;
 const LATE_US: u64 = 2_500;
 /// Such a pause is told as an event when it is longer than this.
 const VERY_LATE_US: u64 = 20_000;
-/// Slow inputs are kept this often.
-const SLOW_EVERY_US: u64 = 1_000_000;
+/// Slow inputs are kept this often: often enough to tell a change within an exposure from one before it.
+const SLOW_EVERY_US: u64 = 200_000;
 /// The beam current must be above its limit for this long.
 const OVER_CURRENT_US: u64 = 2_000;
 
@@ -81,7 +81,7 @@ struct Lamp {
     running: bool,
 }
 
-/// Sums of the slow inputs over a second.
+/// Sums of the slow inputs since the last time.
 #[derive(Clone, Copy, Debug, Default)]
 struct SlowSums {
     beam_na: i64,

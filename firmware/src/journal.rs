@@ -12,8 +12,8 @@ use ringvolt_protocol::{
 pub const READINGS: usize = 7_680;
 /// Events kept.
 pub const EVENTS: usize = 256;
-/// Slow inputs kept, one a second.
-pub const SLOWS: usize = 128;
+/// Slow inputs kept, five a second: 102 s.
+pub const SLOWS: usize = 512;
 /// Strobe edges kept: 17 s at 30 frames a second.
 pub const STROBES: usize = 1_024;
 

@@ -21,3 +21,4 @@ pub mod session;
 pub mod simulation;
 pub mod stamp;
 pub mod text;
+pub mod words;

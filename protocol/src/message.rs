@@ -21,7 +21,7 @@ pub enum ToHost {
     Reading(Reading),
     /// An event.
     Event(Event),
-    /// Slow inputs, once a second.
+    /// Slow inputs, five times a second.
     Slow(Slow),
     /// One edge of the camera's strobe.
     Strobe(Strobe),
@@ -203,7 +203,7 @@ pub struct Slow {
     pub seq: u32,
     /// When, microseconds since power-up.
     pub time_us: u64,
-    /// Beam current, nanoamperes, mean over the last second.
+    /// Beam current, nanoamperes, mean since the one before.
     pub beam_na: Option<i32>,
     /// Temperature inside the divider's enclosure, hundredths of a degree Celsius.
     pub enclosure_centicelsius: Option<i16>,

@@ -2,13 +2,13 @@
 
 use std::io::{self, Write};
 
-use ringvolt_protocol::EventKind;
 use serde_json::{Value, json};
 
 use crate::{
     run::rows::{FrameRow, StampRow},
     session::{Now, Observer, Update, hex},
     text::utc,
+    words::event_words,
 };
 
 /// One JSON object per line, for programs and logs.
@@ -170,29 +170,5 @@ fn stamp_line(stamp: &StampRow) -> String {
             stamp.reasons
         ),
         None => format!("{:<12} {:<8} {}", stamp.frame, stamp.verdict, stamp.reasons),
-    }
-}
-
-/// One event in a few words.
-pub fn event_words(kind: &EventKind) -> String {
-    use ringvolt_protocol::Line;
-    match kind {
-        EventKind::Started { cause } => format!("controller started after {cause:?}"),
-        EventKind::Line { line, active } => match (line, active) {
-            (Line::LoopA, true) => "loop A closed".to_owned(),
-            (Line::LoopA, false) => "loop A opened".to_owned(),
-            (Line::LoopB, true) => "loop B closed".to_owned(),
-            (Line::LoopB, false) => "loop B opened".to_owned(),
-            (Line::Contactors, true) => "contactors released".to_owned(),
-            (Line::Contactors, false) => "contactors pulled in".to_owned(),
-            (Line::Button, true) => "reset button pressed".to_owned(),
-            (Line::Button, false) => "reset button released".to_owned(),
-            (line, active) => format!("{line:?} {}", if *active { "active" } else { "inactive" }),
-        },
-        EventKind::PermitGiven => "permit given".to_owned(),
-        EventKind::PermitWithdrawn => "permit withdrawn".to_owned(),
-        EventKind::Tripped { trip, .. } => format!("trip: {trip:?}"),
-        EventKind::Cleared { trip } => format!("trip cleared: {trip:?}"),
-        other => format!("{other:?}"),
     }
 }

@@ -7,10 +7,18 @@ use std::process::ExitCode;
 use clap::{Parser, Subcommand};
 
 mod bench;
+mod bench_files;
 mod calibrate;
+mod demo;
 mod divider;
+mod export;
 mod failure;
+mod live;
 mod predict;
+mod report;
+mod run;
+mod simulate;
+mod stamp;
 
 pub use failure::Failure;
 
@@ -28,6 +36,18 @@ pub struct Cli {
 pub enum Command {
     /// Check, begin or explain a bench profile: the file that describes one bench.
     Bench(bench::Args),
+    /// Do the whole job on a simulated bench, to see what it is like.
+    Demo(demo::Args),
+    /// Write a run's frames, readings and events as open tables.
+    Export(export::Args),
+    /// Write a run's report as one HTML file.
+    Report(report::Args),
+    /// Record a session: readings, interlock and frames into a run file, stamped live.
+    Run(run::Args),
+    /// Run an invented bench behind a pseudo-terminal: controller, supply, tube and camera, all SIMULATED.
+    Simulate(simulate::Args),
+    /// Stamp every frame of a run again, from raw codes; earlier results stay in the file.
+    Stamp(stamp::Args),
     /// Calibrate the divider against a reference, check it, show certificates.
     Calibrate(Box<calibrate::Args>),
     /// Ratio, stress, settling, bleeding and accuracy of the divider in a profile.
@@ -51,6 +71,12 @@ pub fn main() -> ExitCode {
 fn dispatch(command: &Command) -> Result<(), Failure> {
     match command {
         Command::Bench(args) => bench::run(args),
+        Command::Demo(args) => demo::run(args),
+        Command::Export(args) => export::run(args),
+        Command::Report(args) => report::run(args),
+        Command::Run(args) => run::run(args),
+        Command::Simulate(args) => simulate::run(args),
+        Command::Stamp(args) => stamp::run(args),
         Command::Calibrate(args) => calibrate::run(args),
         Command::Divider(args) => divider::run(args),
         Command::Predict(args) => predict::run(args),

@@ -4,6 +4,10 @@
 //! around a time. A live session answers from memory, a run file from its tables; [`Reduction::stamp`] cannot tell the
 //! difference, so that a stamp made live and one made again from the file follow the same rules.
 
+mod recording;
+
+pub use recording::Recording;
+
 use ringvolt_protocol::{EventKind, Line, Polarity, Reading, Slow};
 use thiserror::Error;
 
@@ -77,8 +81,9 @@ pub fn is_interlock_change(kind: &EventKind) -> bool {
 
 /// Slow inputs this far from an exposure still tell its temperature, microseconds.
 const TEMPERATURE_REACH_US: u64 = 60_000_000;
-/// Beam current is compared over the exposure and this much to either side, microseconds: it is a mean over a second.
-const BEAM_REACH_US: u64 = 1_500_000;
+/// A beam current is the mean over this long before its time, microseconds: the one that covers an exposure's end may come
+/// so much later.
+const BEAM_REACH_US: u64 = 200_000;
 
 /// A way to reduce a recording: one profile with one certificate.
 #[derive(Clone, Debug)]
@@ -158,7 +163,7 @@ impl Reduction {
                 .epochs()
                 .iter()
                 .any(|other| other.key != epoch.key && (from_ns..=exposure.end_utc_ns).contains(&other.zero_utc_ns)),
-            beam_na: &beam(&slow, start_us.saturating_sub(BEAM_REACH_US), start_us + length_us + BEAM_REACH_US),
+            beam_na: &beam(&slow, start_us, start_us + length_us + BEAM_REACH_US),
             enclosure_celsius,
             temperature_covered: enclosure_celsius.map(|celsius| covers_temperature(calibration.certificate, celsius)),
             certificate_valid: Some(calibration.certificate.validity(calibration.day) == Validity::Valid),
@@ -171,8 +176,8 @@ fn covers_temperature(certificate: &Certificate, celsius: f64) -> bool {
     (certificate.conditions.ambient_min_celsius..=certificate.conditions.ambient_max_celsius).contains(&celsius)
 }
 
-/// The temperature nearest in time.
-fn temperature(slow: &[Slow], time_us: u64) -> Option<f64> {
+/// The temperature nearest in time, degrees Celsius, where it is measured.
+pub fn temperature(slow: &[Slow], time_us: u64) -> Option<f64> {
     let measured = slow.iter().filter_map(|slow| Some((slow.time_us.abs_diff(time_us), slow.enclosure_centicelsius?)));
     measured.min_by_key(|(away, _)| *away).map(|(_, centicelsius)| f64::from(centicelsius) * 0.01)
 }

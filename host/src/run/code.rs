@@ -3,7 +3,7 @@
 use ringvolt_protocol::{EventKind, Stream};
 
 /// The word for an event's kind. Never change one: exports carry them.
-pub(super) fn event_code(kind: &EventKind) -> &'static str {
+pub fn event_code(kind: &EventKind) -> &'static str {
     match kind {
         EventKind::Started { .. } => "started",
         EventKind::Line { .. } => "line",

@@ -10,6 +10,7 @@ pub mod rows;
 mod schema;
 mod writer;
 
+pub use code::event_code;
 pub use error::RunError;
 pub use reader::{Header, ReductionRow, RunReader};
 pub use schema::SCHEMA_VERSION;

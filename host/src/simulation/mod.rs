@@ -4,6 +4,7 @@
 //! fixed by its seed; `port` puts a real pseudo-terminal and `realtime` the clock of the machine around it. What was
 //! really true leaves only through [`Truth`]; nothing else may read it.
 
+mod bench;
 mod camera;
 mod contacts;
 mod converter;
@@ -17,6 +18,7 @@ mod supply;
 mod truth;
 mod world;
 
+pub use bench::{SetupError, optics, setup};
 pub use camera::{Shot, ShotTruth};
 pub use picture::{PictureFault, write_picture};
 pub use port::{Port, PortError};

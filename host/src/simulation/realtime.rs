@@ -1,6 +1,7 @@
 //! The simulated bench in real time: pseudo-terminal, picture files, truth.
 
 use std::{
+    collections::VecDeque,
     fs, io,
     path::{Path, PathBuf},
     sync::mpsc::{self, Receiver, Sender},
@@ -100,12 +101,24 @@ fn turn(
 ) -> Result<(), SimulationError> {
     let lost = |error: io::Error| PortError::System { path: bench.link.display().to_string(), why: error.to_string() };
     let mut world = World::new(&bench.setup);
+    let mut arrived: VecDeque<(i64, Vec<u8>)> = VecDeque::new();
     let mut buffer = [0; 1_024];
     while !stop() {
-        let now_ns = clock.mono_ns() - zero_mono_ns;
         let count = port.read(&mut buffer).map_err(lost)?;
-        world.receive(&buffer[..count]);
-        world.advance_to(now_ns.min(world.now_ns() + SLICE_NS));
+        let now_ns = clock.mono_ns() - zero_mono_ns;
+        if count > 0 {
+            arrived.push_back((now_ns, buffer[..count].to_vec()));
+        }
+        // The world may lag behind the clock: bytes must not reach the controller before the time they really came, or
+        // its answers would claim that questions were received before they were asked.
+        let slice_ns = now_ns.min(world.now_ns() + SLICE_NS);
+        let until_ns = arrived.front().map_or(slice_ns, |(at, _)| slice_ns.min(*at));
+        world.advance_to(until_ns);
+        while arrived.front().is_some_and(|(at, _)| world.is_at(*at)) {
+            if let Some((_, bytes)) = arrived.pop_front() {
+                world.receive(&bytes);
+            }
+        }
         let sent = port.write(world.outgoing()).map_err(lost)?;
         world.sent(sent);
         while let Some(shot) = world.take_shot() {

@@ -128,10 +128,11 @@ impl Supply {
         self.slow * (1.0 + self.setup.wander_fraction * wander + mains)
     }
 
-    /// Whether the voltage is where the knob wants it, and nothing is done to it.
+    /// Whether the voltage is where the knob wants it, to an eighth of a per cent, and nothing is done to it: what is
+    /// left of a change is then below what marks a frame.
     pub(super) fn is_settled(&self, on: bool) -> bool {
         let off = (self.slow - self.knob).abs();
-        on && self.ramp.is_none() && self.sag.is_none() && self.knob > 0.0 && off < 3e-4 * self.knob
+        on && self.ramp.is_none() && self.sag.is_none() && self.knob > 0.0 && off < 1.25e-3 * self.knob
     }
 }
 

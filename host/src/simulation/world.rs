@@ -170,6 +170,11 @@ impl World {
         self.received.clear();
     }
 
+    /// Whether the next step lies at or beyond this time.
+    pub const fn is_at(&self, time_ns: i64) -> bool {
+        self.now_ns + STEP_NS > time_ns
+    }
+
     /// Lets time pass until `until_ns`.
     pub fn advance_to(&mut self, until_ns: i64) {
         while self.now_ns + STEP_NS <= until_ns {
@@ -265,7 +270,9 @@ impl World {
 
     fn apply(&mut self, what: What) {
         let now = self.now_ns;
-        self.camera.disturb(now);
+        if !matches!(what, What::StartCamera | What::StopCamera) {
+            self.camera.disturb(now);
+        }
         match what {
             What::SetVolts { volts } => self.supply.set(volts),
             What::Ramp { volts, volts_per_second } => self.supply.ramp(volts, volts_per_second),

@@ -54,8 +54,12 @@ impl Stamper {
     /// Delay of a reading behind the tube, nanoseconds: conversions that *end* within a window were integrating one
     /// conversion time before, half of that in the mean, and the filter lags by its time constant.
     pub fn lag_ns(&self) -> i64 {
-        let conversion = 1.0 / self.profile.controller.conversions_per_second;
-        ((0.5 * conversion + self.profile.divider.filter_seconds) / NS).round() as i64
+        self.conversion_lag_ns() + (self.profile.divider.filter_seconds / NS).round() as i64
+    }
+
+    /// The converter's part of that delay, nanoseconds: half a conversion.
+    pub fn conversion_lag_ns(&self) -> i64 {
+        (0.5 / self.profile.controller.conversions_per_second / NS).round() as i64
     }
 
     /// From when on readings are wanted for this exposure.
