@@ -198,9 +198,7 @@ fn a_full_disk_ends_the_run_with_everything_before_it() {
     let err = String::from_utf8_lossy(&output.stderr).into_owned();
     let copy = bench.folder.path().join("copy.ringvolt");
     let copied = fs::copy(&out, &copy);
-    for extension in ["-wal"] {
-        let _ = fs::copy(format!("{}{extension}", out.display()), format!("{}{extension}", copy.display()));
-    }
+    let _ = fs::copy(format!("{}-wal", out.display()), format!("{}-wal", copy.display()));
     if is_mounted {
         let _ = Command::new("umount").arg(&disk).status();
     }

@@ -155,9 +155,9 @@ fn summarise(out: &Path, run_file: &Path) -> Result<(), Failure> {
         count("marked"),
         count("refused")
     );
-    let best =
+    let mut best =
         stamps.iter().filter(|stamp| stamp.verdict == "good").filter_map(|stamp| Some((&stamp.frame, stamp.value?)));
-    if let Some((frame, value)) = best.last() {
+    if let Some((frame, value)) = best.next_back() {
         println!(
             "  for example {frame}: {:.2} V ± {:.2} V, wavelength {:.4} pm ± {:.4} pm (95 %, k = 2)",
             value.volts,
@@ -175,7 +175,7 @@ fn summarise(out: &Path, run_file: &Path) -> Result<(), Failure> {
             None => reasons.push((1, reason)),
         }
     }
-    reasons.sort_by(|a, b| b.0.cmp(&a.0));
+    reasons.sort_by_key(|(count, _)| std::cmp::Reverse(*count));
     for (count, reason) in reasons {
         println!("    {count:>4}  {}: {}", reason.rule().code, reason.rule().sentence);
     }

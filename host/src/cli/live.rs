@@ -36,7 +36,7 @@ impl Observer for JsonLines {
         // Figures come ten times a second; twice is enough for a log.
         if matches!(update, Update::Now(_)) {
             self.figures += 1;
-            if self.figures % 5 != 0 {
+            if !self.figures.is_multiple_of(5) {
                 return;
             }
         }
@@ -135,7 +135,7 @@ impl Observer for Plain {
             Update::Gap(gap) => format!("{} readings were lost in the controller's journal", gap.count),
             Update::Now(now) => {
                 self.figures += 1;
-                if self.figures % 10 != 0 {
+                if !self.figures.is_multiple_of(10) {
                     return;
                 }
                 figures_line(now)

@@ -6,6 +6,7 @@ use std::process::ExitCode;
 
 use clap::{Parser, Subcommand};
 
+mod align;
 mod bench;
 mod bench_files;
 mod calibrate;
@@ -35,6 +36,8 @@ pub struct Cli {
 /// The commands.
 #[derive(Debug, Subcommand)]
 pub enum Command {
+    /// Find every frame's exposure again, from another source, and stamp the run with it.
+    Align(align::Args),
     /// Check, begin or explain a bench profile: the file that describes one bench.
     Bench(bench::Args),
     /// Do the whole job on a simulated bench, to see what it is like.
@@ -73,6 +76,7 @@ pub fn main() -> ExitCode {
 
 fn dispatch(command: &Command) -> Result<(), Failure> {
     match command {
+        Command::Align(args) => align::run(args),
         Command::Bench(args) => bench::run(args),
         Command::Demo(args) => demo::run(args),
         Command::Export(args) => export::run(args),

@@ -10,7 +10,7 @@ use crate::{
     clock::{Clock, RealClock},
     profile::Profile,
     reduction::{Recording, Reduction},
-    run::{RunReader, RunWriter},
+    run::{RunReader, RunWriter, rows::FrameRow},
 };
 
 /// Stamp every frame of a run again, from raw codes; earlier results stay in the file.
@@ -66,6 +66,16 @@ pub fn of_run(reader: &RunReader) -> Result<Reduction, Failure> {
 
 /// Stamps all frames of a run into a new reduction.
 pub fn reduce(run: &Path, reduction: &Reduction, command: &str) -> Result<VerdictCounts, Failure> {
+    reduce_with(run, reduction, command, None)
+}
+
+/// Stamps all frames of a run into a new reduction, with these exposures instead of their own where any are given.
+pub fn reduce_with(
+    run: &Path,
+    reduction: &Reduction,
+    command: &str,
+    aligned: Option<&[FrameRow]>,
+) -> Result<VerdictCounts, Failure> {
     let reader = RunReader::open(run).map_err(Failure::job)?;
     let recording = Recording::open(&reader).map_err(Failure::job)?;
     let mut writer = RunWriter::append(run).map_err(Failure::job)?;
@@ -78,7 +88,12 @@ pub fn reduce(run: &Path, reduction: &Reduction, command: &str) -> Result<Verdic
         .map_err(Failure::job)?;
     let mut counts = VerdictCounts::default();
     for frame in reader.frames().map_err(Failure::job)? {
-        let stamp = reduction.stamp(&frame, &recording).map_err(Failure::job)?;
+        let other = aligned.and_then(|aligned| aligned.iter().find(|other| other.frame == frame.frame));
+        if let Some(other) = other {
+            writer.exposure(key, other).map_err(Failure::job)?;
+        }
+        let frame = other.unwrap_or(&frame);
+        let stamp = reduction.stamp(frame, &recording).map_err(Failure::job)?;
         match stamp.verdict.as_str() {
             "good" => counts.good += 1,
             "marked" => counts.marked += 1,

@@ -171,7 +171,7 @@ fn frames(reader: &RunReader, mark: &str, row: Row<'_>) -> Result<(), ExportErro
     let reduction = reader.reductions()?.pop().ok_or_else(no_stamps)?;
     let stamps: HashMap<String, StampRow> =
         reader.stamps(reduction.key)?.into_iter().map(|stamp| (stamp.frame.clone(), stamp)).collect();
-    for frame in reader.frames()? {
+    for frame in reader.frames_of(reduction.key)? {
         // A frame that came after the reduction has no stamp yet.
         if let Some(stamp) = stamps.get(&frame.frame) {
             row(&frame_row(&frame, stamp, mark))?;

@@ -5,6 +5,9 @@ mod exposure;
 mod folder;
 pub mod lamp;
 mod picture;
+pub mod strobe;
+pub mod table;
+pub mod video;
 
 pub use exposure::{exposure_of, shutter_seconds};
 pub use folder::{FolderError, FrameFolder, watch};

@@ -9,7 +9,7 @@ fn is_accelerating(volts: f64) -> bool {
 /// V* = V (1 + alpha V), volts: the voltage a slow electron would need for the same momentum. `None` unless `volts` is
 /// positive and finite.
 pub fn relativistic_volts(volts: f64) -> Option<f64> {
-    is_accelerating(volts).then(|| volts * (1.0 + RELATIVITY_PER_VOLT * volts))
+    is_accelerating(volts).then_some(volts * (1.0 + RELATIVITY_PER_VOLT * volts))
 }
 
 /// Wavelength, metres, after an accelerating voltage: h / sqrt(2 m e V (1 + alpha V)). `None` unless `volts` is positive

@@ -92,7 +92,7 @@ mod tests {
         for (spacing, (h, k)) in
             Material::Graphite.spacings().iter().zip([(1.0, 0.0), (1.0, 1.0), (2.0, 0.0), (2.0, 1.0)])
         {
-            let expected = a / (4.0 / 3.0 * (h * h + h * k + k * k) as f64).sqrt();
+            let expected = a / f64::sqrt(4.0 / 3.0 * (h * h + h * k + k * k));
             assert!((spacing.metres / expected - 1.0).abs() < 1e-12, "{}", spacing.ring);
         }
         assert!((Material::Graphite.spacings()[0].metres - 0.213129e-9).abs() < 1e-15);

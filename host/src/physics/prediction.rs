@@ -63,6 +63,7 @@ mod tests {
     /// Worked out once by hand for a = 0.2461 nm, a flat screen at 140 mm and a bulb of 66 mm at 130 mm:
     /// volts, wavelength nm, ring, model, deflection, flat radius, bulb radius, bulb arc (mm).
     #[rustfmt::skip]
+    #[allow(clippy::type_complexity)] // A table, read as one.
     const TABLE: [(f64, f64, &str, Model, f64, f64, f64, f64); 16] = [
         (2500.0, 0.0244986, "10", Model::Powder,  0.115011,  16.1729, 14.8229, 14.9504),
         (2500.0, 0.0244986, "10", Model::Grating, 0.115202,  16.2000, 14.8471, 14.9753),

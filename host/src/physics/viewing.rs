@@ -12,7 +12,7 @@ pub fn flat_glass(glass: f64, index: f64, camera: f64) -> f64 {
 pub fn bulb_glass(inner: f64, glass: f64, index: f64, apparent: f64) -> Option<f64> {
     let outer = inner + glass;
     let sines = [apparent / outer, apparent / (index * inner), apparent / (index * outer)];
-    if sines.iter().any(|sine| !(sine.abs() <= 1.0)) {
+    if !sines.iter().all(|sine| sine.abs() <= 1.0) {
         return None;
     }
     let [entry, inside, refracted] = sines.map(libm::asin);
@@ -37,13 +37,13 @@ mod tests {
     /// The ray is traced backwards from the camera through both faces with Snell's law.
     #[test]
     fn bulb_glass_agrees_with_a_traced_ray() {
-        let (inner, glass, index) = (0.066, 1.5e-3, 1.5);
+        let (inner, glass, index) = (0.066f64, 1.5e-3, 1.5);
         let outer = inner + glass;
-        for apparent in [0.005, 0.016, 0.028] {
+        for apparent in [0.005f64, 0.016, 0.028] {
             // Comes in parallel to the axis at this height, meets the outer sphere, is refracted, meets the inner one.
-            let (x, y) = ((outer * outer - apparent * apparent as f64).sqrt(), apparent);
-            let incidence = (apparent / outer as f64).asin();
-            let turned = incidence - ((incidence.sin() / index) as f64).asin();
+            let (x, y) = (f64::sqrt(outer * outer - apparent * apparent), apparent);
+            let incidence = f64::asin(apparent / outer);
+            let turned = incidence - f64::asin(incidence.sin() / index);
             let (dx, dy) = (-turned.cos(), -turned.sin());
             let along = -(x * dx + y * dy) - ((x * dx + y * dy).powi(2) - (outer * outer - inner * inner)).sqrt();
             let traced = y + along * dy;

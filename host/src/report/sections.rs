@@ -50,7 +50,11 @@ impl Facts {
         let latest = reader.reductions()?.pop();
         let stamps = latest.as_ref().map(|latest| reader.stamps(latest.key)).transpose()?.unwrap_or_default();
         let stamp_of = |frame: &FrameRow| stamps.iter().find(|stamp| stamp.frame == frame.frame).cloned();
-        let frames = reader.frames()?.into_iter().map(|frame| (frame.clone(), stamp_of(&frame))).collect();
+        let frames = match &latest {
+            Some(latest) => reader.frames_of(latest.key)?,
+            None => reader.frames()?,
+        };
+        let frames = frames.into_iter().map(|frame| (frame.clone(), stamp_of(&frame))).collect();
         let mut facts = Self {
             title: format!("Run on {}", header.bench_name),
             simulated: header.simulated,

@@ -314,7 +314,7 @@ impl RunReader {
         self.rows(sql, [epoch], |row| from_json(row, 0))
     }
 
-    /// All frames by their exposure, those without one last.
+    /// All frames with the exposures they were recorded with, by exposure, those without one last.
     ///
     /// # Errors
     /// When the file cannot be read.
@@ -322,29 +322,21 @@ impl RunReader {
         let sql =
             "SELECT frame, file, noticed_utc_ns, sha256, start_utc_ns, end_utc_ns, start_u_ns, length_u_ns, source,
                    unknown_because FROM frame ORDER BY start_utc_ns IS NULL, start_utc_ns, frame";
-        self.rows(sql, [], |row| {
-            let exposure = match row.get::<_, Option<String>>(9)? {
-                Some(why) => Err(why),
-                None => Ok(Exposure {
-                    start_utc_ns: row.get(4)?,
-                    end_utc_ns: row.get(5)?,
-                    start_u_ns: row.get(6)?,
-                    length_u_ns: row.get(7)?,
-                    source: row.get(8)?,
-                }),
-            };
-            let row = FrameRow {
-                frame: row.get(0)?,
-                file: row.get(1)?,
-                noticed_utc_ns: row.get(2)?,
-                sha256: row.get(3)?,
-                exposure,
-            };
-            match &row.exposure {
-                Ok(exposure) if exposure.end_utc_ns <= exposure.start_utc_ns => Err(bad(5, "frame.end_utc_ns")),
-                _ => Ok(row),
-            }
-        })
+        self.rows(sql, [], frame_row)
+    }
+
+    /// All frames with the exposures that a reduction used, in the same order.
+    ///
+    /// # Errors
+    /// When the file cannot be read.
+    pub fn frames_of(&self, reduction: i64) -> Result<Vec<FrameRow>, RunError> {
+        let sql = "SELECT f.frame, f.file, f.noticed_utc_ns, f.sha256,
+                   iif(e.frame IS NULL, f.start_utc_ns, e.start_utc_ns) AS start, iif(e.frame IS NULL, f.end_utc_ns, e.end_utc_ns),
+                   iif(e.frame IS NULL, f.start_u_ns, e.start_u_ns), iif(e.frame IS NULL, f.length_u_ns, e.length_u_ns),
+                   iif(e.frame IS NULL, f.source, e.source), iif(e.frame IS NULL, f.unknown_because, e.unknown_because)
+                   FROM frame f LEFT JOIN exposure e ON e.frame = f.frame AND e.reduction_key = ?1
+                   ORDER BY start IS NULL, start, f.frame";
+        self.rows(sql, [reduction], frame_row)
     }
 
     /// Notes in the order they were made.
@@ -418,6 +410,23 @@ impl RunReader {
         let span = first.zip(last).map_or(0, |(first, last)| last - first + 1);
         Ok((count.unsigned_abs(), (span - count).unsigned_abs()))
     }
+}
+
+fn frame_row(row: &Row<'_>) -> rusqlite::Result<FrameRow> {
+    let exposure = match row.get::<_, Option<String>>(9)? {
+        Some(why) => Err(why),
+        None => Ok(Exposure {
+            start_utc_ns: row.get(4)?,
+            end_utc_ns: row.get(5)?,
+            start_u_ns: row.get(6)?,
+            length_u_ns: row.get(7)?,
+            source: row.get(8)?,
+        }),
+    };
+    if exposure.as_ref().is_ok_and(|exposure| exposure.end_utc_ns <= exposure.start_utc_ns) {
+        return Err(bad(5, "frame.end_utc_ns"));
+    }
+    Ok(FrameRow { frame: row.get(0)?, file: row.get(1)?, noticed_utc_ns: row.get(2)?, sha256: row.get(3)?, exposure })
 }
 
 fn reading(row: &Row<'_>) -> rusqlite::Result<Reading> {

@@ -117,6 +117,19 @@ CREATE TABLE reduction (
     complete INTEGER NOT NULL
 );
 
+-- Exposures that a reduction took from another source than the frame's own row.
+CREATE TABLE exposure (
+    reduction_key INTEGER NOT NULL REFERENCES reduction,
+    frame TEXT NOT NULL REFERENCES frame,
+    start_utc_ns INTEGER,
+    end_utc_ns INTEGER,
+    start_u_ns INTEGER,
+    length_u_ns INTEGER,
+    source TEXT,
+    unknown_because TEXT,
+    PRIMARY KEY (reduction_key, frame)
+) WITHOUT ROWID;
+
 CREATE TABLE stamp (
     reduction_key INTEGER NOT NULL REFERENCES reduction,
     frame TEXT NOT NULL REFERENCES frame,

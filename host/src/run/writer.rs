@@ -341,6 +341,27 @@ impl RunWriter {
         })
     }
 
+    /// Adds the exposure that a reduction uses for a frame instead of the frame's own.
+    ///
+    /// # Errors
+    /// When the file cannot be written.
+    pub fn exposure(&mut self, reduction: i64, row: &FrameRow) -> Result<(), RunError> {
+        let exposure = row.exposure.as_ref().ok();
+        self.insert(
+            "INSERT INTO exposure VALUES (?1, ?2, ?3, ?4, ?5, ?6, ?7, ?8)",
+            params![
+                reduction,
+                row.frame,
+                exposure.map(|e| e.start_utc_ns),
+                exposure.map(|e| e.end_utc_ns),
+                exposure.map(|e| e.start_u_ns),
+                exposure.map(|e| e.length_u_ns),
+                exposure.map(|e| &e.source),
+                row.exposure.as_ref().err()
+            ],
+        )
+    }
+
     /// Adds a stamp to a reduction.
     ///
     /// # Errors

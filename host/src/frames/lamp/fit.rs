@@ -42,13 +42,13 @@ pub(super) struct Fitted {
 
 impl Fitted {
     /// Time of a frame from the middle of the clip if it lies `slip` periods behind its nominal time, seconds.
-    pub(super) fn from_middle(&self, index: usize, slip: i32) -> f64 {
+    pub(super) fn time_of(&self, index: usize, slip: i32) -> f64 {
         self.nominal[index] + f64::from(slip) * self.frame_seconds
     }
 
     /// Centre of its exposure on the controller's clock, seconds.
     pub(super) fn centre_of(&self, index: usize, slip: i32) -> f64 {
-        self.model.centre_of(self.from_middle(index, slip))
+        self.model.centre_of(self.time_of(index, slip))
     }
 
     /// Standard uncertainty of the frame clock at a frame, seconds.

@@ -48,7 +48,7 @@ impl<'a> Band<'a> {
     fn new(code: &LampCode, frames: &[LampFrame], fitted: &Fitted, centre: &'a [i32]) -> Self {
         let range = fitted.model.lit - fitted.model.dark;
         let density = |index: usize, state: usize| {
-            let time = fitted.from_middle(index, centre[index] + state as i32 - REACH);
+            let time = fitted.time_of(index, centre[index] + state as i32 - REACH);
             let sigma = fitted.scatter(code, time);
             let off = (frames[index].brightness - fitted.model.brightness(code, time)) / sigma;
             (1.0 - OUTLIER) * libm::exp(-0.5 * off * off) / sigma + OUTLIER / range
@@ -72,14 +72,14 @@ impl<'a> Band<'a> {
     fn most_likely(&self) -> Vec<usize> {
         let mut score = self.density[0].map(libm::log);
         let mut from = vec![[0usize; STATES]; self.density.len()];
-        for index in 1..self.density.len() {
+        for (index, from) in from.iter_mut().enumerate().skip(1) {
             let best = |to: usize| {
                 let ways =
                     (0..STATES).map(|before| (before, score[before] + libm::log(self.chance(index, before, to))));
                 ways.max_by(|a, b| a.1.total_cmp(&b.1)).unwrap_or((to, f64::NEG_INFINITY))
             };
             let next: [(usize, f64); STATES] = std::array::from_fn(best);
-            from[index] = next.map(|(before, _)| before);
+            *from = next.map(|(before, _)| before);
             score = std::array::from_fn(|to| next[to].1 + libm::log(self.density[index][to]));
         }
         let mut state = (0..STATES).max_by(|a, b| score[*a].total_cmp(&score[*b])).unwrap_or(0);
