@@ -33,7 +33,7 @@ fn kill_after(path: &Path, while_: Duration) -> u32 {
 
 fn committed(lines: &[String]) -> u32 {
     let whole = lines.iter().filter_map(|line| line.strip_prefix("committed ")?.parse().ok());
-    whole.last().unwrap_or(0)
+    whole.next_back().unwrap_or(0)
 }
 
 /// Everything up to `least` must be there, unchanged and without a hole; gives how many are.
