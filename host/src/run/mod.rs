@@ -6,6 +6,7 @@
 
 mod code;
 mod error;
+mod fingerprint;
 mod reader;
 pub mod rows;
 mod schema;
