@@ -1,5 +1,7 @@
 //! Helpers for checks that run the whole program.
 
+pub mod virtual_bench;
+
 use std::{
     collections::HashMap,
     fs,
