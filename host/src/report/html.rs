@@ -131,7 +131,8 @@ svg [stroke='#E1E1E1'] { stroke: var(--line); } svg text { font-family: inherit;
   :root { color-scheme: light; --ink: #000; --paper: #fff; --faint: #444; --line: #bbb; --warn: #8f3500; --band: #145a78;
     --good: #006e3c; --doubt: #8f5200; --tint: #fff; }
   body { max-width: none; font-size: 9.5pt; padding: 0; } nav { display: none; }
-  h2 { break-after: avoid; } figure, tr, .verdicts, dl > * { break-inside: avoid; } figure svg { min-width: 0; }
+  h2 { break-after: avoid; } figure, tr, .verdicts, dl > * { break-inside: avoid; } figure svg { min-width: 0; max-height: 62mm; }
+  section[aria-labelledby=frames] { break-before: page; }
   thead { display: table-header-group; } .scroll, figure { overflow: visible; } table { width: 100%; font-size: 7.5pt; }
   th, td { padding-right: 0.4rem; } td.w:last-child { min-width: 0; } details > * { display: block; }
 }
