@@ -32,7 +32,7 @@ fn kill_after(path: &Path, while_: Duration) -> u32 {
 }
 
 fn committed(lines: &[String]) -> u32 {
-    let whole = lines.iter().filter_map(|line| line.strip_prefix("committed ")?.parse().ok());
+    let mut whole = lines.iter().filter_map(|line| line.strip_prefix("committed ")?.parse().ok());
     whole.next_back().unwrap_or(0)
 }
 

@@ -11,6 +11,8 @@ pub enum Kind {
     Time,
     /// Text.
     Text,
+    /// One of these words.
+    Word(&'static [&'static str]),
     /// `true` or `false`.
     Flag,
 }
@@ -39,6 +41,8 @@ pub struct Table {
     pub file: &'static str,
     /// What a row is.
     pub description: &'static str,
+    /// The columns whose values together name a row; empty where there are none.
+    pub key: &'static [&'static str],
     /// Its columns.
     pub columns: &'static [Column],
 }

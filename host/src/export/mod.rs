@@ -41,6 +41,12 @@ pub enum ExportError {
         /// What the system said.
         why: String,
     },
+    /// The folder holds the tables of another run.
+    #[error("{path} holds the tables of another run: give an empty or new folder, or remove the old tables first")]
+    OtherRun {
+        /// The folder.
+        path: String,
+    },
     /// The folder holds something else.
     #[error("{path} holds {name}, which is no part of an export: give an empty or new folder")]
     Foreign {
@@ -51,12 +57,15 @@ pub enum ExportError {
     },
 }
 
+const DESCRIPTION: &str = "datapackage.json";
+
 /// Writes all tables of a run to a folder, and gives their number.
 ///
 /// # Errors
 /// [`ExportError`].
 pub fn export(reader: &RunReader, reduction: &Reduction, folder: &Path) -> Result<usize, ExportError> {
-    prepare(folder)?;
+    let run = reader.fingerprint()?;
+    prepare(folder, &run)?;
     let recording = Recording::open(reader)?;
     let mut resources = Vec::new();
     for table in tables::ALL {
@@ -73,9 +82,11 @@ pub fn export(reader: &RunReader, reduction: &Reduction, folder: &Path) -> Resul
         fs::rename(&unfinished, &path).map_err(|error| failed(error.to_string()))?;
         resources.push(package::resource(table, &path).map_err(|error| failed(error.to_string()))?);
     }
-    let path = folder.join("datapackage.json");
-    let text = package::package(&reader.header()?, resources);
-    fs::write(&path, text)
+    let path = folder.join(DESCRIPTION);
+    let text = package::package(&reader.header()?, &run, resources);
+    let unfinished = unfinished(&path);
+    fs::write(&unfinished, text)
+        .and_then(|()| fs::rename(&unfinished, &path))
         .map_err(|error| ExportError::Write { path: path.display().to_string(), why: error.to_string() })?;
     Ok(tables::ALL.len())
 }
@@ -84,18 +95,25 @@ fn unfinished(path: &Path) -> PathBuf {
     path.with_extension("part")
 }
 
-/// Makes the folder; one that holds anything but an earlier export is refused.
-fn prepare(folder: &Path) -> Result<(), ExportError> {
+/// Makes the folder; one that holds anything but an earlier export of the same run is refused.
+fn prepare(folder: &Path, run: &str) -> Result<(), ExportError> {
     let failed =
         |error: std::io::Error| ExportError::Write { path: folder.display().to_string(), why: error.to_string() };
     fs::create_dir_all(folder).map_err(failed)?;
     for entry in fs::read_dir(folder).map_err(failed)? {
         let name = entry.map_err(failed)?.file_name().to_string_lossy().into_owned();
-        let ours = name == "datapackage.json"
-            || tables::ALL.iter().any(|t| t.file == name || unfinished(Path::new(t.file)) == Path::new(&name));
+        let is = |file: &str| file == name || unfinished(Path::new(file)) == Path::new(&name);
+        let ours = is(DESCRIPTION) || tables::ALL.iter().any(|table| is(table.file));
         if !ours {
             return Err(ExportError::Foreign { path: folder.display().to_string(), name });
         }
     }
+    let earlier = fs::read_to_string(folder.join(DESCRIPTION)).ok().and_then(|text| package::run_of(&text));
+    if earlier.is_some_and(|earlier| earlier != run) {
+        return Err(ExportError::OtherRun { path: folder.display().to_string() });
+    }
     Ok(())
 }
+
+#[cfg(test)]
+mod tests;

@@ -50,7 +50,12 @@ const FRAMES: &[Column] = &[
     sometimes("ripple_volts", Kind::Number, "V", "peak-to-peak spread of conversions within a mains cycle"),
     sometimes("coverage", Kind::Number, "1", "share of the exposure that readings cover"),
     sometimes("enclosure_celsius", Kind::Number, "degC", "temperature in the divider's enclosure"),
-    always("verdict", Kind::Text, "", "good, marked (usable, with named doubts) or refused"),
+    always(
+        "verdict",
+        Kind::Word(&["good", "marked", "refused"]),
+        "",
+        "good, marked (usable, with named doubts) or refused",
+    ),
     always("reasons", Kind::Text, "", "codes of the doubts, joined by semicolons"),
     sometimes("sha256", Kind::Text, "", "SHA-256 of the image file"),
     SIMULATED,
@@ -117,22 +122,42 @@ const NOTES: &[Column] = &[
 
 /// All tables.
 pub(super) const ALL: [&Table; 6] = [
-    &Table { name: "frames", file: "frames.csv", description: "One row per camera frame.", columns: FRAMES },
+    &Table {
+        name: "frames",
+        file: "frames.csv",
+        description: "One row per camera frame.",
+        key: &["frame"],
+        columns: FRAMES,
+    },
     &Table {
         name: "readings",
         file: "readings.csv",
         description: "One row per reading of the controller.",
+        key: &["epoch", "seq"],
         columns: READINGS,
     },
-    &Table { name: "events", file: "events.csv", description: "One row per event of the controller.", columns: EVENTS },
+    &Table {
+        name: "events",
+        file: "events.csv",
+        description: "One row per event of the controller.",
+        key: &["epoch", "seq"],
+        columns: EVENTS,
+    },
     &Table {
         name: "slow",
         file: "slow.csv",
-        description: "Beam current and temperature, five times a second.",
+        description: "Beam current and temperature of the enclosure.",
+        key: &[],
         columns: SLOW,
     },
-    &Table { name: "gaps", file: "gaps.csv", description: "Entries that were lost, and counted.", columns: GAPS },
-    &Table { name: "notes", file: "notes.csv", description: "Notes made during the run.", columns: NOTES },
+    &Table {
+        name: "gaps",
+        file: "gaps.csv",
+        description: "Entries that were lost, and counted.",
+        key: &[],
+        columns: GAPS,
+    },
+    &Table { name: "notes", file: "notes.csv", description: "Notes made during the run.", key: &[], columns: NOTES },
 ];
 
 type Row<'a> = &'a mut dyn FnMut(&[String]) -> Result<(), ExportError>;
@@ -163,7 +188,12 @@ fn cell<T: ToString>(value: Option<T>) -> String {
 
 /// A measured number with so many decimals: fixed, so that the same run gives the same bytes.
 fn fixed(value: Option<f64>, decimals: usize) -> String {
-    value.map(|value| format!("{value:.decimals$}")).unwrap_or_default()
+    let text = value.map(|value| format!("{value:.decimals$}")).unwrap_or_default();
+    // A negative number that rounds to nothing is nothing.
+    match text.strip_prefix('-') {
+        Some(digits) if digits.bytes().all(|byte| matches!(byte, b'0' | b'.')) => digits.to_owned(),
+        _ => text,
+    }
 }
 
 fn frames(reader: &RunReader, mark: &str, row: Row<'_>) -> Result<(), ExportError> {

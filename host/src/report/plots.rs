@@ -4,10 +4,12 @@ use plotters::prelude::*;
 
 use super::ReportError;
 
-const WIDE: (u32, u32) = (1_000, 380);
+/// Drawn twice as large as it is shown: coordinates of the SVG are whole numbers.
+const WIDE: (u32, u32) = (2_000, 760);
 const INK: RGBColor = RGBColor(40, 40, 40);
 const BAND: RGBColor = RGBColor(20, 90, 120);
 const GOOD: RGBColor = RGBColor(0, 110, 60);
+const GRID: RGBColor = RGBColor(225, 225, 225);
 const DOUBT: RGBColor = RGBColor(170, 95, 0);
 
 /// A stretch of time in which the voltage lay between two values: one column of the plot.
@@ -37,7 +39,18 @@ fn named(svg: String, title: &str, description: &str) -> String {
     let open = format!(
         " role=\"img\" aria-labelledby=\"{id}-t {id}-d\"><title id=\"{id}-t\">{title}</title><desc id=\"{id}-d\">{description}</desc>"
     );
+    // Colours come from the page, so that they follow light, dark and print; `html` has the rule for each. A column that
+    // rounding left without width is one wide.
     svg.replacen('>', &open, 1)
+        .replace(" opacity=\"1\"", "")
+        .replace("#FFFFFF", "none")
+        .replace("width=\"0\"", "width=\"1\"")
+}
+
+/// A number on an axis, with no decimal that says nothing.
+fn plain(value: &f64) -> String {
+    let text = format!("{value:.4}");
+    text.trim_end_matches('0').trim_end_matches('.').to_owned()
 }
 
 fn range(values: impl Iterator<Item = f64>) -> (f64, f64) {
@@ -50,26 +63,38 @@ fn range(values: impl Iterator<Item = f64>) -> (f64, f64) {
 }
 
 /// Voltage over time, with frames as dots and events as marks on the axis.
-pub(super) fn voltage(spans: &[Span], dots: &[Dot], events: &[f64], description: &str) -> Result<String, ReportError> {
+///
+/// Crosses along the top are refused frames, which have no value of their own.
+pub(super) fn voltage(
+    spans: &[Span],
+    dots: &[Dot],
+    refused: &[f64],
+    events: &[f64],
+    description: &str,
+) -> Result<String, ReportError> {
     let (x0, x1) = range(spans.iter().flat_map(|span| [span.from_s, span.until_s]));
-    let (y0, y1) = range(spans.iter().flat_map(|span| [span.lowest, span.highest]));
+    let (y0, highest) = range(spans.iter().flat_map(|span| [span.lowest, span.highest]));
+    let y1 = highest + 0.08 * (highest - y0);
     let mut svg = String::new();
     {
         let root = SVGBackend::with_string(&mut svg, WIDE).into_drawing_area();
         let mut chart = ChartBuilder::on(&root)
-            .margin(12)
-            .x_label_area_size(40)
-            .y_label_area_size(70)
+            .margin(24)
+            .x_label_area_size(80)
+            .y_label_area_size(140)
             .build_cartesian_2d(x0..x1, y0..y1)
             .map_err(failed)?;
         chart
             .configure_mesh()
             .x_desc("time from the first reading, s")
             .y_desc("accelerating voltage, V")
-            .label_style(("sans-serif", 15, &INK))
-            .axis_desc_style(("sans-serif", 16, &INK))
+            .x_label_formatter(&plain)
+            .y_label_formatter(&plain)
+            .label_style(("sans-serif", 30, &INK))
+            .axis_desc_style(("sans-serif", 32, &INK))
             .light_line_style(WHITE)
-            .bold_line_style(RGBColor(225, 225, 225))
+            .bold_line_style(GRID.stroke_width(2))
+            .axis_style(INK.stroke_width(2))
             .draw()
             .map_err(failed)?;
         let thick = (y1 - y0) * 0.003;
@@ -78,8 +103,11 @@ pub(super) fn voltage(spans: &[Span], dots: &[Dot], events: &[f64], description:
         });
         chart.draw_series(columns).map_err(failed)?;
         let tall = y0 + 0.05 * (y1 - y0);
-        let marks = events.iter().map(|x| PathElement::new([(*x, y0), (*x, tall)], INK.stroke_width(2)));
+        let marks = events.iter().map(|x| PathElement::new([(*x, y0), (*x, tall)], INK.stroke_width(4)));
         chart.draw_series(marks).map_err(failed)?;
+        let top = y1 - 0.04 * (y1 - y0);
+        let inside = refused.iter().filter(|x| (x0..=x1).contains(*x));
+        chart.draw_series(inside.map(|x| Cross::new((*x, top), 8, DOUBT.stroke_width(4)))).map_err(failed)?;
         draw_dots(&mut chart, dots)?;
         root.present().map_err(failed)?;
     }
@@ -92,12 +120,12 @@ type Chart<'a, 'b> = ChartContext<
     Cartesian2d<plotters::coord::types::RangedCoordf64, plotters::coord::types::RangedCoordf64>,
 >;
 
-/// Good frames are filled circles, doubtful ones open triangles: shape tells them apart without colour.
+/// Good frames are circles, doubtful ones triangles: shape tells them apart without colour.
 fn draw_dots(chart: &mut Chart<'_, '_>, dots: &[Dot]) -> Result<(), ReportError> {
-    let good = dots.iter().filter(|dot| dot.good).map(|dot| Circle::new((dot.x, dot.y), 4, GOOD.filled()));
+    let good = dots.iter().filter(|dot| dot.good).map(|dot| Circle::new((dot.x, dot.y), 7, GOOD.filled()));
     chart.draw_series(good).map_err(failed)?;
     let doubtful =
-        dots.iter().filter(|dot| !dot.good).map(|dot| TriangleMarker::new((dot.x, dot.y), 6, DOUBT.stroke_width(2)));
+        dots.iter().filter(|dot| !dot.good).map(|dot| TriangleMarker::new((dot.x, dot.y), 12, DOUBT.filled()));
     chart.draw_series(doubtful).map_err(failed)?;
     Ok(())
 }
@@ -110,22 +138,25 @@ pub(super) fn wavelength(dots: &[Dot], curve: &[(f64, f64)], description: &str) 
     {
         let root = SVGBackend::with_string(&mut svg, WIDE).into_drawing_area();
         let mut chart = ChartBuilder::on(&root)
-            .margin(12)
-            .x_label_area_size(40)
-            .y_label_area_size(70)
+            .margin(24)
+            .x_label_area_size(80)
+            .y_label_area_size(140)
             .build_cartesian_2d(x0..x1, y0..y1)
             .map_err(failed)?;
         chart
             .configure_mesh()
             .x_desc("accelerating voltage, V")
             .y_desc("electron wavelength, pm")
-            .label_style(("sans-serif", 15, &INK))
-            .axis_desc_style(("sans-serif", 16, &INK))
+            .x_label_formatter(&plain)
+            .y_label_formatter(&plain)
+            .label_style(("sans-serif", 30, &INK))
+            .axis_desc_style(("sans-serif", 32, &INK))
             .light_line_style(WHITE)
-            .bold_line_style(RGBColor(225, 225, 225))
+            .bold_line_style(GRID.stroke_width(2))
+            .axis_style(INK.stroke_width(2))
             .draw()
             .map_err(failed)?;
-        chart.draw_series(LineSeries::new(curve.iter().copied(), BAND.stroke_width(2))).map_err(failed)?;
+        chart.draw_series(LineSeries::new(curve.iter().copied(), BAND.stroke_width(4))).map_err(failed)?;
         draw_dots(&mut chart, dots)?;
         root.present().map_err(failed)?;
     }

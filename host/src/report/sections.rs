@@ -1,175 +1,27 @@
-//! The sections of a report.
+//! The sections of a report: each is a function from the facts to HTML.
 
 use super::{
     ReportError,
-    html::{escape, section, table},
-    plots::{self, Dot, Span},
+    facts::Facts,
+    html::{Cell, escape, list, section, table},
+    plots,
 };
 use crate::{
-    calibration::Certificate,
     physics,
-    reduction::{Recording, Reduction, is_interlock_change},
     run::{
-        Header, RunReader,
+        Severity,
         rows::{FrameRow, StampRow},
     },
-    stamp::{Calibration, Reason},
+    stamp::Reason,
     text::utc,
-    words::event_words,
 };
-
-/// Everything the sections tell.
-pub(super) struct Facts {
-    pub title: String,
-    pub simulated: bool,
-    header: Header,
-    frames: Vec<(FrameRow, Option<StampRow>)>,
-    spans: Vec<Span>,
-    zero_ns: i64,
-    end_ns: i64,
-    readings: u64,
-    missing: u64,
-    gaps: u64,
-    events: Vec<(Option<i64>, String, bool)>,
-    certificate: Option<Certificate>,
-    reduction: Option<String>,
-    run_name: String,
-    clock_bound_ms: Option<f64>,
-}
-
-/// Columns in the voltage plot.
-const COLUMNS: i64 = 900;
-
-impl Facts {
-    pub(super) fn gather(
-        reader: &RunReader,
-        recording: &Recording<'_>,
-        reduction: &Reduction,
-    ) -> Result<Self, ReportError> {
-        let header = reader.header()?;
-        let latest = reader.reductions()?.pop();
-        let stamps = latest.as_ref().map(|latest| reader.stamps(latest.key)).transpose()?.unwrap_or_default();
-        let stamp_of = |frame: &FrameRow| stamps.iter().find(|stamp| stamp.frame == frame.frame).cloned();
-        let frames = match &latest {
-            Some(latest) => reader.frames_of(latest.key)?,
-            None => reader.frames()?,
-        };
-        let frames = frames.into_iter().map(|frame| (frame.clone(), stamp_of(&frame))).collect();
-        let mut facts = Self {
-            title: format!("Run on {}", header.bench_name),
-            simulated: header.simulated,
-            frames,
-            spans: Vec::new(),
-            zero_ns: 0,
-            end_ns: 0,
-            readings: 0,
-            missing: 0,
-            gaps: 0,
-            events: Vec::new(),
-            certificate: reduction.certificate().cloned(),
-            reduction: latest.map(|latest| format!("{} by {}", latest.command, latest.software)),
-            run_name: reader.path().file_name().map(|name| name.to_string_lossy().into_owned()).unwrap_or_default(),
-            clock_bound_ms: None,
-            header,
-        };
-        facts.gather_epochs(reader, recording)?;
-        facts.gather_voltage(reader, recording, reduction)?;
-        Ok(facts)
-    }
-
-    fn gather_epochs(&mut self, reader: &RunReader, recording: &Recording<'_>) -> Result<(), ReportError> {
-        for row in reader.epochs()? {
-            let key = row.epoch_key;
-            let clock = recording.epoch(key).map(|epoch| &epoch.clock);
-            let (readings, missing) = reader.count_readings(key)?;
-            self.readings += readings;
-            self.missing += missing;
-            self.gaps += reader.gaps(key)?.iter().map(|gap| u64::from(gap.count)).sum::<u64>();
-            for event in reader.events(key)? {
-                let at = clock.and_then(|clock| clock.utc(event.time_us)).map(|instant| instant.utc_ns);
-                self.events.push((at, event_words(&event.kind), is_interlock_change(&event.kind)));
-            }
-            if let Some(clock) = clock {
-                let (first, last) = clock.span_us();
-                let bound = clock.utc(first.midpoint(last)).map(|instant| instant.bound_ns as f64 * 1e-6);
-                self.clock_bound_ms = bound.or(self.clock_bound_ms);
-            }
-        }
-        Ok(())
-    }
-
-    /// The voltage as the lowest and highest of each column's readings.
-    fn gather_voltage(
-        &mut self,
-        reader: &RunReader,
-        recording: &Recording<'_>,
-        reduction: &Reduction,
-    ) -> Result<(), ReportError> {
-        let mut points: Vec<(i64, f64)> = Vec::new();
-        for row in reader.epochs()? {
-            let Some(epoch) = recording.epoch(row.epoch_key) else { continue };
-            let Some(calibration) = reduction.calibration(epoch.zero_utc_ns, None) else { continue };
-            reader.each_reading(row.epoch_key, |reading| {
-                let at = epoch.clock.utc(reading.time_us).map(|instant| instant.utc_ns);
-                if let (Some(at), Some(code)) = (at, reading.sense.mean()) {
-                    points.push((at, calibration.sense_volts(code)));
-                }
-                true
-            })?;
-        }
-        let (Some(first), Some(last)) = (points.first(), points.last()) else { return Ok(()) };
-        (self.zero_ns, self.end_ns) = (first.0, last.0);
-        let column = ((last.0 - first.0) / COLUMNS).max(10_000_000);
-        let seconds = |ns: i64| (ns - self.zero_ns) as f64 * 1e-9;
-        for (at, volts) in &points {
-            let from = seconds(at - (at - self.zero_ns).rem_euclid(column));
-            match self.spans.last_mut().filter(|span| span.from_s == from) {
-                Some(span) => {
-                    span.lowest = span.lowest.min(*volts);
-                    span.highest = span.highest.max(*volts);
-                }
-                None => {
-                    let until_s = from + column as f64 * 1e-9;
-                    self.spans.push(Span { from_s: from, until_s, lowest: *volts, highest: *volts });
-                }
-            }
-        }
-        Ok(())
-    }
-
-    fn count(&self, verdict: &str) -> usize {
-        self.frames.iter().filter(|(_, stamp)| stamp.as_ref().is_some_and(|stamp| stamp.verdict == verdict)).count()
-    }
-
-    fn dots(&self, of: impl Fn(&FrameRow, &StampRow) -> Option<(f64, f64)>) -> Vec<Dot> {
-        let dot = |(frame, stamp): &(FrameRow, Option<StampRow>)| {
-            let stamp = stamp.as_ref()?;
-            let (x, y) = of(frame, stamp)?;
-            Some(Dot { x, y, good: stamp.verdict == "good" })
-        };
-        self.frames.iter().filter_map(dot).collect()
-    }
-}
-
-fn list(items: &[(&str, String)]) -> String {
-    let items: String =
-        items.iter().map(|(term, text)| format!("<dt>{}</dt><dd>{}</dd>", escape(term), escape(text))).collect();
-    format!("<dl>{items}</dl>")
-}
 
 pub(super) fn summary(facts: &Facts) -> String {
     let span = if facts.readings > 0 && facts.end_ns > facts.zero_ns {
-        format!("{} to {}", utc(facts.zero_ns), utc(facts.end_ns))
+        format!("{} to {} UTC", day_and_clock(facts.zero_ns), day_and_clock(facts.end_ns))
     } else {
         "no reading could be placed in time".to_owned()
     };
-    let frames = format!(
-        "{}: {} good, {} marked, {} refused",
-        facts.frames.len(),
-        facts.count("good"),
-        facts.count("marked"),
-        facts.count("refused")
-    );
     let clock =
         facts.clock_bound_ms.map_or("not tied to UTC".to_owned(), |ms| format!("within {ms:.2} ms of the computer's"));
     let items = [
@@ -181,15 +33,31 @@ pub(super) fn summary(facts: &Facts) -> String {
                 facts.readings, facts.missing, facts.gaps
             ),
         ),
-        ("Frames", frames),
         ("Controller's clock", clock),
     ];
-    let mut body = list(&items);
+    let mut body = verdicts(facts) + &list(&items);
     if facts.count("good") == 0 {
         body += "<p>No frame of this run is good. The reasons stand below; the readings are kept, and the run can be reduced again with <code>ringvolt stamp</code>.</p>";
     }
     body += &reasons_table(facts);
     section("summary", "Summary", &body)
+}
+
+/// The three counts, large: what most readers came for.
+fn verdicts(facts: &Facts) -> String {
+    let tile = |verdict: &str, means: &str| {
+        format!(
+            "<li class=\"{verdict}\"><b>{}</b> <span>{verdict}</span> <small>{means}</small></li>",
+            facts.count(verdict)
+        )
+    };
+    let total = facts.frames.len();
+    format!(
+        "<ul class=\"verdicts\" aria-label=\"Verdicts on {total} frames\">{}{}{}</ul>",
+        tile("good", "no rule fired"),
+        tile("marked", "usable, with named doubts"),
+        tile("refused", "no value, for stated reasons")
+    )
 }
 
 fn reasons_table(facts: &Facts) -> String {
@@ -200,17 +68,17 @@ fn reasons_table(facts: &Facts) -> String {
         if count > 0 {
             let does = if rule.level == crate::stamp::Level::Refuse { "refuses" } else { "marks" };
             rows.push(vec![
-                format!("<code>{}</code>", rule.code),
-                count.to_string(),
-                does.to_owned(),
-                format!("<span>{}</span>", escape(rule.sentence)),
+                Cell::Words(rule.code.to_owned()),
+                Cell::Number(count.to_string()),
+                Cell::Words(does.to_owned()),
+                Cell::Words(rule.sentence.to_owned()),
             ]);
         }
     }
     if rows.is_empty() {
         return "<p>No frame was marked or refused.</p>".to_owned();
     }
-    table("Why frames were marked or refused", &["reason", "frames", "it", "meaning"], &rows)
+    table("Why frames were marked or refused", &["reason", "frames", "effect", "meaning"], &rows)
 }
 
 pub(super) fn voltage(facts: &Facts) -> Result<String, ReportError> {
@@ -220,8 +88,7 @@ pub(super) fn voltage(facts: &Facts) -> Result<String, ReportError> {
     let seconds = |ns: i64| (ns - facts.zero_ns) as f64 * 1e-9;
     let dots = facts.dots(|frame, stamp| {
         let exposure = frame.exposure.as_ref().ok()?;
-        let middle = exposure.start_utc_ns + (exposure.end_utc_ns - exposure.start_utc_ns) / 2;
-        Some((seconds(middle), stamp.value?.volts))
+        Some((facts.middle_s(exposure), stamp.value?.volts))
     });
     let events: Vec<f64> =
         facts.events.iter().filter(|(_, _, interlock)| *interlock).filter_map(|(at, ..)| at.map(seconds)).collect();
@@ -232,9 +99,12 @@ pub(super) fn voltage(facts: &Facts) -> Result<String, ReportError> {
         dots.len(),
         events.len()
     );
-    let svg = plots::voltage(&facts.spans, &dots, &events, &description)?;
-    let caption = "Band: lowest to highest reading. Filled circles: good frames. Open triangles: marked frames. Refused frames have no value. Strokes at the foot: interlock events.";
-    Ok(section("voltage", "Voltage over time", &format!("<figure>{svg}<figcaption>{caption}</figcaption></figure>")))
+    let svg = plots::voltage(&facts.spans, &dots, &facts.refused(), &events, &description)?;
+    let caption = format!(
+        "Band: lowest to highest reading in each column. Circles: good frames. Triangles: marked frames. Crosses at the top: refused frames, which have no value. Strokes at the foot: interlock events. Zero is {} UTC.",
+        day_and_clock(facts.zero_ns)
+    );
+    Ok(section("voltage", "Voltage over time", &figure(&svg, &caption)))
 }
 
 pub(super) fn wavelength(facts: &Facts) -> Result<String, ReportError> {
@@ -257,40 +127,50 @@ pub(super) fn wavelength(facts: &Facts) -> Result<String, ReportError> {
     Ok(section(
         "wavelength",
         "Wavelength",
-        &format!(
-            "<figure>{svg}<figcaption>Line: relation. Filled circles: good frames. Open triangles: marked frames.</figcaption></figure>{text}"
-        ),
+        &(figure(&svg, "Line: the relation below. Circles: good frames. Triangles: marked frames.") + text),
     ))
 }
 
+fn figure(svg: &str, caption: &str) -> String {
+    format!("<figure>{svg}<figcaption>{}</figcaption></figure>", escape(caption))
+}
+
+/// To the millisecond, for people; tables carry nine decimals.
+fn day_and_clock(utc_ns: i64) -> String {
+    let text = utc(utc_ns + 500_000);
+    format!("{} {}", text.get(..10).unwrap_or_default(), text.get(11..23).unwrap_or_default())
+}
+
 pub(super) fn frames(facts: &Facts) -> String {
-    let rows: Vec<Vec<String>> = facts.frames.iter().map(|(frame, stamp)| frame_row(frame, stamp.as_ref())).collect();
+    let rows: Vec<Vec<Cell>> = facts.frames.iter().map(|(frame, stamp)| frame_row(frame, stamp.as_ref())).collect();
     if rows.is_empty() {
         return section("frames", "Frames", "<p>No frame was found.</p>");
     }
-    let headings =
-        ["frame", "start of exposure (UTC)", "s", "V", "± V (k=2)", "pm", "± pm (k=2)", "verdict", "reasons"];
-    section("frames", "Frames", &table("Every frame, with what was refused and why", &headings, &rows))
+    let headings = ["frame", "exposure from (UTC)", "for, s", "V", "± V", "pm", "± pm", "verdict", "reasons"];
+    let caption = "Every frame, with what was refused and why. ± is the expanded uncertainty, k = 2, about 95 %.";
+    section("frames", "Frames", &table(caption, &headings, &rows))
 }
 
-fn frame_row(frame: &FrameRow, stamp: Option<&StampRow>) -> Vec<String> {
+fn frame_row(frame: &FrameRow, stamp: Option<&StampRow>) -> Vec<Cell> {
     let exposure = frame.exposure.as_ref().ok();
     let value = stamp.and_then(|stamp| stamp.value);
-    let number = |value: Option<f64>, decimals: usize| value.map(|v| format!("{v:.decimals$}")).unwrap_or_default();
-    let mut reasons = stamp.map_or("not stamped yet".to_owned(), |stamp| stamp.reasons.clone());
+    let number = |value: Option<f64>, decimals: usize| {
+        Cell::Number(value.map(|v| format!("{v:.decimals$}")).unwrap_or_default())
+    };
+    let mut reasons = stamp.map_or("not stamped yet".to_owned(), |stamp| stamp.reasons.replace(';', ", "));
     if let (Err(why), true) = (&frame.exposure, reasons.contains(Reason::ExposureUnknown.rule().code)) {
         reasons = format!("{reasons}: {why}");
     }
     vec![
-        escape(&frame.frame),
-        exposure.map(|e| utc(e.start_utc_ns)).unwrap_or_default(),
+        Cell::Words(frame.frame.clone()),
+        Cell::Number(exposure.map(|e| day_and_clock(e.start_utc_ns)).unwrap_or_default()),
         number(exposure.map(|e| (e.end_utc_ns - e.start_utc_ns) as f64 * 1e-9), 3),
         number(value.map(|v| v.volts), 2),
         number(value.map(|v| 2.0 * v.volts_u), 2),
         number(value.map(|v| v.wavelength_pm), 4),
         number(value.map(|v| 2.0 * v.wavelength_u_pm), 4),
-        stamp.map(|stamp| escape(&stamp.verdict)).unwrap_or_default(),
-        escape(&reasons.replace(';', "; ")),
+        Cell::Verdict(stamp.map(|stamp| stamp.verdict.clone()).unwrap_or_default()),
+        Cell::Words(reasons),
     ]
 }
 
@@ -317,11 +197,12 @@ pub(super) fn uncertainty(facts: &Facts) -> String {
 }
 
 pub(super) fn interlock(facts: &Facts) -> String {
-    let rows: Vec<Vec<String>> = facts
+    let rows: Vec<Vec<Cell>> = facts
         .events
         .iter()
         .map(|(at, words, _)| {
-            vec![at.map_or("not placed in time".to_owned(), utc), format!("<span>{}</span>", escape(words))]
+            let at = at.map_or("not placed in time".to_owned(), day_and_clock);
+            vec![Cell::Words(at), Cell::Words(words.clone())]
         })
         .collect();
     if rows.is_empty() {
@@ -366,19 +247,59 @@ pub(super) fn calibration(facts: &Facts) -> String {
     section("calibration", "Calibration", &body)
 }
 
+/// What is missing, and whether it is accounted for.
+pub(super) fn completeness(facts: &Facts) -> String {
+    let rows: Vec<Vec<Cell>> = facts
+        .completeness
+        .iter()
+        .map(|finding| {
+            let weight = match finding.severity {
+                Severity::Fine => "fine",
+                Severity::Note => "note",
+                Severity::Fault => "FAULT",
+            };
+            vec![
+                Cell::Words(finding.subject.to_owned()),
+                Cell::Words(weight.to_owned()),
+                Cell::Words(finding.sentence.clone()),
+            ]
+        })
+        .collect();
+    let text = "<p>A number that is missing, or a pause between windows, is judged in the stamp of every frame it touches. <code>ringvolt verify</code> also compares the frame files.</p>";
+    let table = table("What is there, what is missing, and what may be trusted", &["part", "it is", "found"], &rows);
+    section("completeness", "Completeness", &(table + text))
+}
+
+pub(super) fn notes(facts: &Facts) -> String {
+    if facts.notes.is_empty() {
+        return String::new();
+    }
+    let row = |note: &crate::run::rows::NoteRow| {
+        let words = [day_and_clock(note.utc_ns), note.author.clone(), note.text.clone()];
+        words.map(Cell::Words).to_vec()
+    };
+    let rows: Vec<Vec<Cell>> = facts.notes.iter().map(row).collect();
+    section("notes", "Notes", &table("Written during the run", &["UTC", "by", "note"], &rows))
+}
+
 pub(super) fn provenance(facts: &Facts) -> String {
     let body = list(&[
         ("Run file", facts.run_name.clone()),
+        ("Fingerprint of the run", facts.fingerprint.clone()),
+        ("SHA-256 of the profile", facts.profile_hash.clone()),
+        (
+            "SHA-256 of the certificate",
+            facts.certificate.as_ref().map_or("none".to_owned(), |certificate| certificate.hash.clone()),
+        ),
         ("Recorded by", facts.header.software.clone()),
         ("Reduced", facts.reduction.clone().unwrap_or_else(|| "not yet".to_owned())),
         ("Link", facts.header.link.clone()),
         ("Frames folder", facts.header.frames_dir.clone()),
     ]);
-    let hashes: Vec<Vec<String>> = facts
-        .frames
-        .iter()
-        .map(|(frame, _)| vec![escape(&frame.file), format!("<code>{}</code>", escape(&frame.sha256))])
-        .collect();
+    let hash = |(frame, _): &(FrameRow, Option<StampRow>)| {
+        vec![Cell::Words(frame.file.clone()), Cell::Words(frame.sha256.clone())]
+    };
+    let hashes: Vec<Vec<Cell>> = facts.frames.iter().map(hash).collect();
     let details = format!(
         "<details><summary>Hashes of {} frame files</summary>{}</details>",
         hashes.len(),

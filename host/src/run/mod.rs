@@ -6,6 +6,7 @@
 
 mod code;
 mod error;
+mod fingerprint;
 mod reader;
 pub mod rows;
 mod schema;
@@ -16,7 +17,7 @@ pub use code::event_code;
 pub use error::RunError;
 pub use reader::{Header, ReductionRow, RunReader};
 pub use schema::SCHEMA_VERSION;
-pub use verify::{Finding, Severity, verify};
+pub use verify::{Finding, Severity, completeness, verify};
 pub use writer::{RunHeader, RunWriter};
 
 #[cfg(test)]

@@ -1,9 +1,5 @@
 //! Whether the certificate in the file is the one the readings were taken under.
 
-use std::collections::BTreeMap;
-
-use ringvolt_protocol::CertificateHash;
-
 use super::Finding;
 use crate::{
     calibration::Certificate,
@@ -11,6 +7,9 @@ use crate::{
 };
 
 const SUBJECT: &str = "certificate";
+
+/// The hash of a controller that holds none.
+const NO_CERTIFICATE: &str = "0000000000000000";
 
 pub(super) fn check(reader: &RunReader) -> Result<Vec<Finding>, RunError> {
     let header = reader.header()?;
@@ -36,20 +35,17 @@ pub(super) fn check(reader: &RunReader) -> Result<Vec<Finding>, RunError> {
 
 /// Counts the readings by the certificate the controller held.
 fn held(reader: &RunReader, certificate: &Certificate) -> Result<Finding, RunError> {
-    let mut counts: BTreeMap<[u8; 8], u64> = BTreeMap::new();
-    for epoch in reader.epochs()? {
-        reader.each_reading(epoch.epoch_key, |reading| {
-            *counts.entry(reading.certificate.0).or_default() += 1;
-            true
-        })?;
-    }
-    let ours = certificate.hash8();
-    let none = counts.remove(&CertificateHash::NONE.0).unwrap_or(0);
-    let same = counts.remove(&ours.0).unwrap_or(0);
-    let other: u64 = counts.values().sum();
-    let short: String = certificate.hash.chars().take(16).collect();
+    let counts: Vec<(String, i64)> = reader.rows(
+        "SELECT hash, count(*) FROM reading JOIN held_certificate USING (certificate_key) GROUP BY certificate_key",
+        [],
+        |row| Ok((row.get(0)?, row.get(1)?)),
+    )?;
+    let ours: String = certificate.hash.chars().take(16).collect();
+    let of = |wanted: &str| counts.iter().filter(|(hash, _)| hash == wanted).map(|(_, count)| *count).sum::<i64>();
+    let (same, none) = (of(&ours), of(NO_CERTIFICATE));
+    let other = counts.iter().map(|(_, count)| *count).sum::<i64>() - same - none;
     Ok(match (other, none) {
-        (0, 0) => Finding::fine(SUBJECT, format!("{same} readings were taken under it ({short}), and it is unchanged")),
+        (0, 0) => Finding::fine(SUBJECT, format!("{same} readings were taken under it ({ours}), and it is unchanged")),
         (0, _) => Finding::note(
             SUBJECT,
             format!(
@@ -59,7 +55,7 @@ fn held(reader: &RunReader, certificate: &Certificate) -> Result<Finding, RunErr
         _ => Finding::note(
             SUBJECT,
             format!(
-                "{other} readings were taken under another certificate than the one in the run ({short}): frames exposed then are refused until stamped under theirs"
+                "{other} readings were taken under another certificate than the one in the run ({ours}): frames exposed then are refused until stamped under theirs"
             ),
         ),
     })
