@@ -201,7 +201,7 @@ impl<J: BorrowMut<Journal>> Controller<J> {
         if elapsed_us <= LATE_US {
             return;
         }
-        self.acquisition.mark(now_us, ReadingFlags::LATE);
+        self.acquisition.paused(now_us - elapsed_us, now_us);
         // What this processor slept through is not the converters' silence.
         self.sense.forgive(now_us);
         self.cross.forgive(now_us);

@@ -5,7 +5,7 @@
 //! the clock, which is enough for entries younger than 71 minutes.
 
 use ringvolt_protocol::{
-    Ack, CertificateHash, Event, EventKind, Gap, Reading, ReadingFlags, Slow, Stream, Strobe, WindowCodes,
+    Ack, CertificateHash, Event, EventKind, Gap, Reading, ReadingFlags, Slow, Stream, Strobe, Trip, WindowCodes,
 };
 
 /// Readings kept: 76.8 s at 100 a second.
@@ -23,6 +23,9 @@ const FLAG_BITS: u16 = (1 << GENERATION_SHIFT) - 1;
 
 /// Low 24 bits of a packed word hold the sum, the upper eight the count.
 const SUM_BITS: u32 = 24;
+
+/// The kind of event whose bytes are all zero: the compiler keeps the tag of the others within this one's fields.
+const BLANK: EventKind = EventKind::Tripped { trip: Trip::LoopOpened, sense_mv: None, cross_mv: None };
 
 /// One converter's part of a packed reading.
 #[derive(Clone, Copy)]
@@ -155,7 +158,7 @@ impl Journal {
     pub const fn new() -> Self {
         Self {
             readings: Ring::new(PackedReading::EMPTY),
-            events: Ring::new(Event { seq: 0, time_us: 0, kind: EventKind::PermitGiven }),
+            events: Ring::new(Event { seq: 0, time_us: 0, kind: BLANK }),
             slow: Ring::new(PackedSlow { time_us: 0, beam_na: None, enclosure_centicelsius: None }),
             strobes: Ring::new(PackedStrobe(0)),
             certificates: [CertificateHash::NONE; 4],

@@ -2,7 +2,7 @@
 
 use super::{
     guide::{GuideError, Talk},
-    suspect::guess,
+    suspect::{ended, guess},
 };
 use crate::instrument::{Meter, Question};
 
@@ -89,12 +89,17 @@ impl ReferenceSource for Typed {
                 _ if line.starts_with("s ") => return Ok(Answer::Skip(line[2..].trim().to_owned())),
                 _ => match parse_typed_volts(line) {
                     Err(problem) => talk.say(&format!("  \"{}\" {problem}.", line.escape_debug())),
-                    Ok(volts) if plausible(volts, expected_volts) || doubted == Some(volts) => {
-                        return Ok(Answer::Volts(volts));
+                    Ok(volts) if plausible(volts, expected_volts) => return Ok(Answer::Volts(volts)),
+                    Ok(volts) if plausible(1e3 * volts, expected_volts) => {
+                        talk.say(&format!(
+                            "  {volts} V, but the divider shows about {expected_volts:.0} V: that is in kilovolts. Type volts, or \
+                             \"{volts} kV\"."
+                        ));
                     }
+                    Ok(volts) if doubted == Some(volts) => return Ok(Answer::Volts(volts)),
                     Ok(volts) => {
                         doubted = Some(volts);
-                        let why = guess(volts, expected_volts);
+                        let why = ended(guess(volts, expected_volts));
                         talk.say(&format!(
                             "  {volts} V, but the divider shows about {expected_volts:.0} V{why} Type it right, or the same \
                              once more if it is right."
@@ -139,7 +144,7 @@ impl ReferenceSource for Metered {
                 Ok(volts) if plausible(volts, expected_volts) => return Ok(Answer::Volts(volts)),
                 Ok(volts) => format!(
                     "The meter gives {volts:.1} V, but the divider shows about {expected_volts:.0} V{} Check the probe's ratio and leads.",
-                    guess(volts, expected_volts)
+                    ended(guess(volts, expected_volts))
                 ),
                 Err(error) => error.to_string(),
             };

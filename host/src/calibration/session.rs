@@ -108,9 +108,18 @@ pub struct Session {
     file: File,
     header: Header,
     outcomes: BTreeMap<usize, Outcome>,
+    /// Whether every entry waits for the disk. Only simulated calibrations by the thousand may do without.
+    durable: bool,
 }
 
 impl Session {
+    /// For simulated calibrations: entries do not wait for the disk.
+    #[cfg(test)]
+    pub(super) fn without_waiting(mut self) -> Self {
+        self.durable = false;
+        self
+    }
+
     /// Begins a journal; an existing file is never overwritten.
     ///
     /// # Errors
@@ -118,7 +127,7 @@ impl Session {
     pub fn create(path: &Path, header: Header) -> Result<Self, SessionError> {
         let opened = OpenOptions::new().read(true).append(true).create_new(true).open(path);
         let file = opened.map_err(|source| file_error("create", path, source))?;
-        let mut session = Self { path: path.to_owned(), file, header, outcomes: BTreeMap::new() };
+        let mut session = Self { path: path.to_owned(), file, header, outcomes: BTreeMap::new(), durable: true };
         session.lock()?;
         session.append(&Entry::Begin { header: session.header.clone() })?;
         Ok(session)
@@ -137,7 +146,7 @@ impl Session {
         read.map_err(|source| file_error("read", path, source))?;
         let whole = whole_lines(&bytes);
         let (header, outcomes) = replay(path, &bytes[..whole])?;
-        let session = Self { path: path.to_owned(), file, header, outcomes };
+        let session = Self { path: path.to_owned(), file, header, outcomes, durable: true };
         session.lock()?;
         let cut = bytes.len() - whole;
         if cut == 0 {
@@ -168,7 +177,10 @@ impl Session {
         let mut line = serde_json::to_string(entry).map_err(|error| file_error("write", &self.path, error.into()))?;
         line.push('\n');
         let end = self.file.seek(SeekFrom::End(0)).map_err(|source| file_error("write", &self.path, source))?;
-        let written = self.file.write_all(line.as_bytes()).and_then(|()| self.file.sync_data());
+        let written = self
+            .file
+            .write_all(line.as_bytes())
+            .and_then(|()| if self.durable { self.file.sync_data() } else { Ok(()) });
         written.map_err(|source| {
             // Half a line in the middle would spoil the file; if it cannot be cut now, `resume` cuts it.
             let _ = self.file.set_len(end);

@@ -19,17 +19,17 @@ pub(super) fn outliers(points: &[Point], found: &Assessment) -> Vec<Finding> {
             format!(
                 "{head}: the reference was noted as {} V, but both senses say {expected:.1} V{}",
                 point.reference_volts,
-                guess(point.reference_volts, expected)
+                ended(guess(point.reference_volts, expected))
             )
         } else {
             let name = if found.sense.outliers.contains(&index) { "main sense" } else { "cross-sense" };
             format!(
-                "{head}: the code of the {name} does not fit the reference of {} V, while the other sense does",
+                "{head}: the code of the {name} does not fit the reference of {} V, while the other sense does.",
                 point.reference_volts
             )
         };
         let advice =
-            format!("; correct it if you know what it was, or leave it out with --leave-out {number} and a reason");
+            format!(" Correct it if you know what it was, or leave it out with --leave-out {number} and a reason");
         finding(Severity::Fail, "outlier", format!("{text}{advice}."))
     };
     found.outliers().into_iter().map(sentence).collect()
@@ -56,6 +56,11 @@ pub fn guess(typed: f64, expected: f64) -> &'static str {
     } else {
         ""
     }
+}
+
+/// A guess as the end of a sentence.
+pub(super) fn ended(guess: &'static str) -> &'static str {
+    if guess.is_empty() { "." } else { guess }
 }
 
 /// The number with every pair of neighbouring digits swapped in turn.

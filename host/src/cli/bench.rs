@@ -11,7 +11,7 @@ use clap::Subcommand;
 use super::Failure;
 use crate::{
     calibration::{Certificate, CertificateError, Validity, day_of_utc_ns},
-    profile::{self, FIELDS, Field, Kind, Presence, Profile, ProfileError},
+    profile::{self, Field, Kind, Presence, Profile, ProfileError, fields},
     text::TextError,
 };
 
@@ -154,7 +154,7 @@ fn ask(answers: &mut impl BufRead, questions: &mut impl Write) -> Result<String,
                  High voltage can kill: measure nothing inside the enclosure that is not dead and earthed.\n";
     questions.write_all(begin.as_bytes()).map_err(lost)?;
     let mut values = BTreeMap::new();
-    for field in FIELDS {
+    for field in fields() {
         if asked(field, &values) {
             let value = one(field, answers, questions).map_err(lost)?;
             values.insert(field.path, value);
@@ -166,7 +166,8 @@ fn ask(answers: &mut impl BufRead, questions: &mut impl Write) -> Result<String,
 fn asked(field: &Field, values: &BTreeMap<&str, String>) -> bool {
     let bulb =
         field.path == "tube.bulb_radius_mm" && values.get("tube.screen").is_some_and(|shape| shape == "\"bulb\"");
-    bulb || field.presence == Presence::Required
+    // Parts of the divider are looked up at the bench, not from memory: the explanation names their tables.
+    bulb || field.presence == Presence::Required && !field.path.matches('.').count().gt(&1)
 }
 
 /// Asks until an answer passes the field's own check.
@@ -197,7 +198,12 @@ fn one(field: &Field, answers: &mut impl BufRead, questions: &mut impl Write) ->
 /// What a person typed, as TOML.
 fn literal(field: &Field, answer: &str) -> String {
     match field.kind {
-        Kind::Number { .. } | Kind::Whole { .. } | Kind::Switch { .. } | Kind::Endings { .. } => answer.to_owned(),
+        Kind::Number { .. }
+        | Kind::Numbers { .. }
+        | Kind::Count { .. }
+        | Kind::Whole { .. }
+        | Kind::Switch { .. }
+        | Kind::Endings { .. } => answer.to_owned(),
         _ => serde_json::Value::String(answer.trim_matches('"').to_owned()).to_string(),
     }
 }

@@ -55,7 +55,7 @@ pub fn run(args: &Args) -> Result<(), Failure> {
     let scenario = Scenario::demonstration(args.seconds);
     let bench = Bench {
         setup: simulation::setup(&profile, &certificate, scenario, args.seed).map_err(Failure::job)?,
-        optics: simulation::optics(&profile).map_err(Failure::job)?,
+        optics: simulation::optics(&profile, args.seed).map_err(Failure::job)?,
         link: args.out.join("controller"),
         frames: args.out.join("frames"),
         truth: args.out.join("truth.csv"),

@@ -8,7 +8,9 @@ use clap::{Parser, Subcommand};
 
 mod bench;
 mod bench_files;
+mod calibrate;
 mod demo;
+mod divider;
 mod export;
 mod failure;
 mod live;
@@ -17,6 +19,7 @@ mod report;
 mod run;
 mod simulate;
 mod stamp;
+mod verify;
 
 pub use failure::Failure;
 
@@ -38,8 +41,6 @@ pub enum Command {
     Demo(demo::Args),
     /// Write a run's frames, readings and events as open tables.
     Export(export::Args),
-    /// What a bench's tube shows at given voltages.
-    Predict(predict::Args),
     /// Write a run's report as one HTML file.
     Report(report::Args),
     /// Record a session: readings, interlock and frames into a run file, stamped live.
@@ -48,6 +49,14 @@ pub enum Command {
     Simulate(simulate::Args),
     /// Stamp every frame of a run again, from raw codes; earlier results stay in the file.
     Stamp(stamp::Args),
+    /// Calibrate the divider against a reference, check it, show certificates.
+    Calibrate(Box<calibrate::Args>),
+    /// Ratio, stress, settling, bleeding and accuracy of the divider in a profile.
+    Divider(divider::Args),
+    /// Wavelength and rings this tube would show at given voltages.
+    Predict(predict::Args),
+    /// Check a run file and say what may still be trusted.
+    Verify(verify::Args),
 }
 
 /// Parses the command line, carries it out and gives the exit code: 0 done, 1 failed with a stated reason, 2 wrong usage.
@@ -67,10 +76,13 @@ fn dispatch(command: &Command) -> Result<(), Failure> {
         Command::Bench(args) => bench::run(args),
         Command::Demo(args) => demo::run(args),
         Command::Export(args) => export::run(args),
-        Command::Predict(args) => predict::run(args),
         Command::Report(args) => report::run(args),
         Command::Run(args) => run::run(args),
         Command::Simulate(args) => simulate::run(args),
         Command::Stamp(args) => stamp::run(args),
+        Command::Calibrate(args) => calibrate::run(args),
+        Command::Divider(args) => divider::run(args),
+        Command::Predict(args) => predict::run(args),
+        Command::Verify(args) => verify::run(args),
     }
 }

@@ -76,7 +76,7 @@ pub fn run(args: &Args) -> Result<(), Failure> {
     let beside = || args.frames.parent().unwrap_or(Path::new(".")).join("truth.csv");
     let bench = Bench {
         setup: simulation::setup(&profile, &certificate, scenario, args.seed).map_err(Failure::job)?,
-        optics: simulation::optics(&profile).map_err(Failure::job)?,
+        optics: simulation::optics(&profile, args.seed).map_err(Failure::job)?,
         link: args.link_path.clone(),
         frames: args.frames.clone(),
         truth: args.truth.clone().unwrap_or_else(beside),

@@ -202,6 +202,7 @@ mod tests {
             pixels_per_mm: 8.0,
             pixels_per_mm_u_relative: 0.002,
             distance_mm: 0.0,
+            lamp_chip_seconds: 0.073,
         }
     }
 

@@ -2,7 +2,7 @@
 
 use std::path::PathBuf;
 
-use super::{Profile, ScreenShape, TimeSource};
+use super::{Profile, ScreenShape, TimeSource, parts};
 
 /// One field: what it is called, what it may hold, and where it goes.
 pub struct Field {
@@ -39,6 +39,26 @@ pub enum Kind {
         most: f64,
         /// Where it goes.
         at: fn(&mut Profile) -> &mut f64,
+    },
+    /// A list of numbers, each within a range.
+    Numbers {
+        /// Fewest and most entries.
+        count: (usize, usize),
+        /// Smallest permitted.
+        least: f64,
+        /// Largest permitted.
+        most: f64,
+        /// Where it goes.
+        at: fn(&mut Profile) -> &mut Vec<f64>,
+    },
+    /// A whole number within a range.
+    Count {
+        /// Smallest permitted.
+        least: u32,
+        /// Largest permitted.
+        most: u32,
+        /// Where it goes.
+        at: fn(&mut Profile) -> &mut u32,
     },
     /// One of a few whole numbers.
     Whole {
@@ -88,11 +108,20 @@ pub const TABLES: &[(&str, &str)] = &[
     ("bench", "What the bench is called."),
     ("tube", "The tube. Measure the distance from target to screen with care: rings scale with it."),
     ("divider", "The voltage divider, as far as stamps need it."),
+    (
+        parts::SENSE,
+        "The parts of the main string, for `ringvolt divider`; leave the whole table out if you do not know them.",
+    ),
+    (parts::CROSS, "The parts of the cross-sense string; leave the whole table out if you do not know them."),
+    (parts::SUPPLY, "What the divider hangs on; leave the whole table out if you do not know it."),
     ("controller", "What the controller is told. It can only withdraw the permit; the wired chain protects people."),
     ("camera", "The camera, and how the exposure of each frame is known."),
     ("calibration", "The calibration that belongs to this bench."),
     ("limits", "When a frame is refused or marked."),
 ];
+
+/// Tables that may be left out as a whole; where one is there, its required fields are.
+pub const OPTIONAL_TABLES: &[&str] = &[parts::SENSE, parts::CROSS, parts::SUPPLY];
 
 const SCREENS: &[&str] = &["flat", "bulb"];
 const SCREEN_VALUES: &[ScreenShape] = &[ScreenShape::Flat, ScreenShape::Bulb];
@@ -104,12 +133,12 @@ const SOURCE_VALUES: &[TimeSource] =
 
 use Presence::{Default as Or, Required};
 
-const fn number(least: f64, most: f64, at: fn(&mut Profile) -> &mut f64) -> Kind {
+pub(super) const fn number(least: f64, most: f64, at: fn(&mut Profile) -> &mut f64) -> Kind {
     Kind::Number { least, most, at }
 }
 
 /// A field of the table; the order of arguments is the order people read it in.
-const fn field(
+pub(super) const fn field(
     path: &'static str,
     unit: &'static str,
     presence: Presence,
@@ -120,9 +149,14 @@ const fn field(
     Field { path, unit, presence, example, kind, about }
 }
 
-/// All fields, in the order they are written.
+/// All fields.
+pub fn fields() -> impl Iterator<Item = &'static Field> + Clone {
+    FIELDS.iter().chain(parts::FIELDS.iter().copied().flatten())
+}
+
+/// The fields of all tables but the optional ones, in the order they are written.
 #[rustfmt::skip]
-pub const FIELDS: &[Field] = &[
+const FIELDS: &[Field] = &[
     field("bench.name", "", Required, "\"Simulated bench\"",
         Kind::Line { may_be_empty: false, at: |p| &mut p.bench.name },
         "Name of the bench on reports; certificates carry the same name."),
@@ -294,6 +328,10 @@ impl Field {
         let unit = if self.unit.is_empty() { String::new() } else { format!(" {}", self.unit) };
         match &self.kind {
             Kind::Number { least, most, .. } => format!("{} to {}{unit}", plain(*least), plain(*most)),
+            Kind::Numbers { count: (fewest, longest), least, most, .. } => {
+                format!("a list of {fewest} to {longest} numbers, each {} to {}{unit}", plain(*least), plain(*most))
+            }
+            Kind::Count { least, most, .. } => format!("whole numbers from {least} to {most}"),
             Kind::Whole { allowed, .. } => {
                 let words: Vec<_> = allowed.iter().map(u8::to_string).collect();
                 format!("{}{unit}", words.join(" or "))

@@ -7,12 +7,15 @@ use std::path::PathBuf;
 
 mod field;
 mod parse;
+mod parts;
 mod settings;
 #[cfg(test)]
 mod tests;
 mod write;
 
-pub use field::{FIELDS, Field, Kind, Presence, TABLES};
+use crate::divider::{Network, Supply};
+
+pub use field::{Field, Kind, Presence, TABLES, fields};
 pub(crate) use parse::check_answer;
 pub use parse::{Fault, MAX_PROFILE_BYTES, ProfileError};
 pub use settings::SettingsError;
@@ -95,6 +98,12 @@ pub struct Divider {
     pub filter_seconds: f64,
     /// Its standard uncertainty, seconds.
     pub filter_u_seconds: f64,
+    /// The parts of the main string, where described.
+    pub sense: Option<Network>,
+    /// The parts of the cross-sense string, where described.
+    pub cross: Option<Network>,
+    /// What the divider hangs on, where described.
+    pub supply: Option<Supply>,
 }
 
 /// `[controller]`

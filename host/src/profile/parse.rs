@@ -11,10 +11,13 @@ use toml::{
 };
 
 use super::{
-    FIELDS, Field, Kind, Presence, Profile, ScreenShape, TABLES, TimeSource,
-    field::{self, plain},
+    Field, Kind, Presence, Profile, ScreenShape, TABLES, TimeSource,
+    field::{self, OPTIONAL_TABLES, fields, plain},
 };
-use crate::text::{self, TextError};
+use crate::{
+    divider::{Network, figures},
+    text::{self, TextError},
+};
 
 /// Longest profile that is read, bytes.
 pub const MAX_PROFILE_BYTES: u64 = 256 << 10;
@@ -118,8 +121,11 @@ impl Reader<'_> {
 
     fn read(&mut self, root: &Table<'_>) {
         self.unknown(root, "");
-        for field in FIELDS {
-            self.field(root, field);
+        for field in fields() {
+            let left_out = OPTIONAL_TABLES.contains(&field.table()) && find(root, field.table()).is_none();
+            if !left_out {
+                self.field(root, field);
+            }
         }
         if self.faults.is_empty() {
             self.rules(root);
@@ -131,7 +137,7 @@ impl Reader<'_> {
         for (key, value) in table {
             let path =
                 if prefix.is_empty() { key.get_ref().to_string() } else { format!("{prefix}.{}", key.get_ref()) };
-            let is_field = FIELDS.iter().any(|field| field.path == path);
+            let is_field = fields().any(|field| field.path == path);
             let is_table = TABLES.iter().any(|(name, _)| *name == path);
             match (is_field, is_table, value.get_ref().as_table()) {
                 (true, ..) => {}
@@ -215,6 +221,19 @@ const RULES: &[Rule] = &[
                 .to_owned()
         })
     }),
+    ("divider.nominal_volts_per_code", |p| {
+        apart(p.divider.nominal_volts_per_code, p.divider.sense.as_ref(), "divider.sense")
+    }),
+    ("divider.nominal_cross_volts_per_code", |p| {
+        apart(p.divider.nominal_cross_volts_per_code, p.divider.cross.as_ref(), "divider.cross")
+    }),
+    ("divider.filter_seconds", |p| {
+        let parts = figures(p.divider.sense.as_ref()?, 1000.0).filter_seconds;
+        let near = (p.divider.filter_seconds - parts).abs() <= 1e-5 + 0.25 * parts;
+        let found = plain(p.divider.filter_seconds);
+        (!near)
+            .then(|| format!("is {found} s, but the parts in [divider.sense] give {parts:.2e} s; correct one of them"))
+    }),
     ("camera.exposure_seconds", |p| {
         let needed = p.camera.time_source == TimeSource::FileTime && p.camera.exposure_seconds <= 0.0;
         needed.then(|| {
@@ -239,6 +258,19 @@ const RULES: &[Rule] = &[
     }),
 ];
 
+/// When the nominal worth of a code is not what the parts give, within 5 %.
+fn apart(nominal: f64, network: Option<&Network>, table: &str) -> Option<String> {
+    let parts = network?.volts_per_code();
+    let near = (parts / nominal - 1.0).abs() <= 0.05;
+    (!near).then(|| {
+        format!(
+            "is {} V, but the parts in [{table}] give {} V; correct one of them",
+            plain(nominal),
+            plain((1e6 * parts).round() / 1e6)
+        )
+    })
+}
+
 fn find<'t, 'i>(root: &'t Table<'i>, path: &str) -> Option<&'t Spanned<DeValue<'i>>> {
     let mut parts = path.split('.');
     let first = root.get(parts.next()?)?;
@@ -246,7 +278,7 @@ fn find<'t, 'i>(root: &'t Table<'i>, path: &str) -> Option<&'t Spanned<DeValue<'
 }
 
 fn unknown_problem(path: &str) -> String {
-    let names = FIELDS.iter().map(|field| field.path).chain(TABLES.iter().map(|(name, _)| *name));
+    let names = fields().map(|field| field.path).chain(TABLES.iter().map(|(name, _)| *name));
     let nearest = names.map(|name| (strsim::jaro_winkler(name, path), name)).max_by(|a, b| a.0.total_cmp(&b.0));
     let hint = match nearest {
         Some((likeness, name)) if likeness > 0.85 => format!("; did you mean {name}?"),
@@ -301,6 +333,18 @@ fn set(profile: &mut Profile, field: &Field, value: &DeValue<'_>, origin: &str) 
         Kind::Number { least, most, at } => {
             let within = number(value).filter(|found| (*least..=*most).contains(found));
             within.map(|found| *at(profile) = found)
+        }
+        Kind::Numbers { count, least, most, at } => {
+            let inside = |found: &f64| (*least..=*most).contains(found);
+            let entries = value.as_array().map(|list| list.iter().map(|entry| number(entry.get_ref()).filter(inside)));
+            let list: Option<Vec<f64>> = entries.and_then(Iterator::collect);
+            list.filter(|list| (count.0..=count.1).contains(&list.len())).map(|list| *at(profile) = list)
+        }
+        Kind::Count { least, most, at } => {
+            let found = whole(value)
+                .and_then(|found| u32::try_from(found).ok())
+                .filter(|found| (*least..=*most).contains(found));
+            found.map(|found| *at(profile) = found)
         }
         Kind::Whole { allowed, at } => {
             let found = whole(value).and_then(|found| u8::try_from(found).ok()).filter(|found| allowed.contains(found));

@@ -2,6 +2,8 @@
 
 use std::path::{Path, PathBuf};
 
+use proptest::prelude::*;
+
 use super::*;
 use crate::calibration;
 
@@ -80,9 +82,9 @@ fn the_example_loads_and_goes_where_it_belongs() {
 
 #[test]
 fn every_field_stands_in_a_known_table_once() {
-    for (index, field) in FIELDS.iter().enumerate() {
+    for (index, field) in fields().enumerate() {
         assert!(TABLES.iter().any(|(name, _)| *name == field.table()), "{}", field.path);
-        assert!(FIELDS[..index].iter().all(|other| other.path != field.path), "{} twice", field.path);
+        assert!(fields().take(index).all(|other| other.path != field.path), "{} twice", field.path);
         assert!(field.about.ends_with('.'), "{}", field.path);
     }
 }
@@ -91,7 +93,7 @@ fn every_field_stands_in_a_known_table_once() {
 #[test]
 fn every_number_has_its_own_place() {
     let mut profile = Profile::default();
-    let places = FIELDS.iter().filter_map(|field| match field.kind {
+    let places = fields().filter_map(|field| match field.kind {
         Kind::Number { at, .. } => Some((field.path, at)),
         _ => None,
     });
@@ -105,9 +107,9 @@ fn every_number_has_its_own_place() {
 
 #[test]
 fn every_field_refuses_a_value_of_the_wrong_type_with_its_line() {
-    for field in FIELDS {
+    for field in fields() {
         let wrong = match field.kind {
-            Kind::Number { .. } | Kind::Whole { .. } => "\"12\"",
+            Kind::Number { .. } | Kind::Whole { .. } | Kind::Count { .. } => "\"12\"",
             _ => "12",
         };
         let (text, line) = with(field, wrong);
@@ -122,13 +124,28 @@ fn every_field_refuses_a_value_of_the_wrong_type_with_its_line() {
 
 #[test]
 fn every_number_refuses_what_lies_outside_its_range_with_its_line() {
-    for field in FIELDS {
+    for field in fields() {
         let outside: Vec<String> = match field.kind {
             Kind::Number { least, most, .. } => {
                 let step = (most - least).abs() * 1e-6;
                 [least - step, most + step, f64::NAN, f64::INFINITY]
                     .map(|value| format!("{value:?}").to_lowercase())
                     .into()
+            }
+            Kind::Numbers { count, least, most, .. } => {
+                let long = vec![least.to_string(); count.1 + 1].join(", ");
+                [
+                    format!("[{}]", least * 0.999 - 1e-9),
+                    format!("[{}]", most * 1.001),
+                    "[nan]".to_owned(),
+                    format!("[{long}]"),
+                    "[\"1\"]".to_owned(),
+                    "[[1]]".to_owned(),
+                ]
+                .into()
+            }
+            Kind::Count { least, most, .. } => {
+                [i64::from(least) - 1, i64::from(most) + 1, -5].map(|value| value.to_string()).into()
             }
             Kind::Whole { .. } => ["0", "49", "61", "306", "-50", "99999999999999999999"].map(str::to_owned).into(),
             Kind::Word { .. } => ["\"\"", "\"Positive\"", "\"x\\u0007\""].map(str::to_owned).into(),
@@ -152,7 +169,7 @@ fn every_number_refuses_what_lies_outside_its_range_with_its_line() {
 
 #[test]
 fn every_number_accepts_both_ends_of_its_range() {
-    for field in FIELDS {
+    for field in fields() {
         if let Kind::Number { least, most, .. } = field.kind {
             for value in [least, most] {
                 let (text, _) = with(field, &format!("{value:?}"));
@@ -168,7 +185,7 @@ fn every_number_accepts_both_ends_of_its_range() {
 
 #[test]
 fn every_field_is_required_or_has_a_default_that_passes_its_own_check() {
-    for field in FIELDS {
+    for field in fields() {
         let text = without(field);
         match field.presence {
             Presence::Required => {
@@ -241,9 +258,12 @@ fn fields_that_contradict_each_other_are_refused() {
         ("tube.target_to_screen_mm", "300.0"),
         ("limits.span_mark_fraction", "0.01"),
         ("limits.least_volts", "5300.0"),
+        ("divider.nominal_volts_per_code", "0.625"),
+        ("divider.nominal_cross_volts_per_code", "0.25"),
+        ("divider.filter_seconds", "0.004"),
     ];
     for (path, value) in cases {
-        let field = FIELDS.iter().find(|field| field.path == path).unwrap();
+        let field = fields().find(|field| field.path == path).unwrap();
         let (text, line) = with(field, value);
         one_fault(&text, path, Some(line));
     }
@@ -262,9 +282,32 @@ fn fields_that_contradict_each_other_are_refused() {
 }
 
 #[test]
+fn a_table_of_parts_may_be_left_out_but_not_left_half_done() {
+    let cut = |text: &str, table: &str| -> String {
+        let mut keep = true;
+        let keep_line = |line: &&str| {
+            if line.starts_with('[') {
+                keep = *line != format!("[{table}]");
+            }
+            keep
+        };
+        text.lines().filter(keep_line).collect::<Vec<_>>().join("\n")
+    };
+    let text = cut(&cut(&cut(&example(), "divider.sense"), "divider.cross"), "divider.supply");
+    let divider = Profile::parse(&text, "").unwrap().divider;
+    assert_eq!((divider.sense, divider.cross, divider.supply), (None, None, None));
+    let half = format!("{text}\n[divider.supply]\nfarads = 1e-9\n");
+    let found = faults(&half);
+    assert_eq!((found[0].field.as_str(), found.len()), ("divider.supply.bleeder_ohms", 1), "{found:?}");
+    let whole = Profile::parse(&example(), "").unwrap().divider;
+    assert_eq!(whole.sense.unwrap().low_ohms, [80e3, 80e3]);
+    assert_eq!(whole.cross.unwrap().elements, 12);
+}
+
+#[test]
 fn explanations_name_every_field() {
     let text = explain();
-    for field in FIELDS {
+    for field in fields() {
         assert!(text.contains(&format!("  {}\n", field.key())), "{}", field.path);
     }
 }
@@ -299,4 +342,29 @@ fn with_an_inverting_front_end_the_limit_is_the_size_of_the_code() {
     certificate.sense.code_min = 0;
     let code = negative.settings_record(Some(&certificate)).unwrap().limit_code;
     assert_eq!(code, 16_960);
+}
+
+proptest! {
+    #![proptest_config(ProptestConfig { cases: 500, failure_persistence: None, ..ProptestConfig::default() })]
+
+    /// Damaged profiles load within their ranges or are refused with sentences that name the file.
+    #[test]
+    fn damaged_profiles_never_panic(edits in prop::collection::vec((any::<u16>(), any::<u8>()), 1..6)) {
+        let mut bytes = example().into_bytes();
+        for (at, value) in edits {
+            let at = usize::from(at) % bytes.len();
+            if value % 2 == 0 { bytes[at] = value / 2 } else { bytes.insert(at, value / 2) }
+        }
+        match Profile::parse(&String::from_utf8_lossy(&bytes), "bench.toml") {
+            Ok(mut profile) => for field in fields() {
+                if let Kind::Number { least, most, at } = field.kind {
+                    prop_assert!((least..=most).contains(at(&mut profile)), "{}", field.path);
+                }
+            },
+            Err(error) => prop_assert!(error.faults().iter().all(|fault| {
+                let sentence = fault.to_string();
+                sentence.starts_with("bench.toml") && !sentence.contains('\n')
+            }), "{}", error),
+        }
+    }
 }

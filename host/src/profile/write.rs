@@ -2,21 +2,28 @@
 
 use std::{collections::BTreeMap, fmt::Write as _};
 
-use super::{FIELDS, Field, Presence, TABLES};
+use super::{
+    Field, Presence, TABLES,
+    field::{OPTIONAL_TABLES, fields},
+};
 
 /// Width of comments and explanations, characters.
 const WIDTH: usize = 110;
 
 /// A commented profile. `values` gives TOML values by dotted path; every other field has its default, and a required
-/// field that is not given is left for the person to fill in (such a profile is refused until it is).
+/// field that is not given is left for the person to fill in (such a profile is refused until it is). Optional tables of
+/// which nothing is given are left out.
 pub fn commented(heading: &str, values: &BTreeMap<&str, String>) -> String {
     let mut text = String::new();
     for line in heading.lines() {
         text.push_str(&wrapped("# ", line));
     }
     for (table, about) in TABLES {
+        if OPTIONAL_TABLES.contains(table) && !values.keys().any(|path| path.starts_with(&format!("{table}."))) {
+            continue;
+        }
         let _ = write!(text, "\n{}[{table}]\n", wrapped("# ", about));
-        for field in FIELDS.iter().filter(|field| field.table() == *table) {
+        for field in fields().filter(|field| field.table() == *table) {
             text.push_str(&wrapped("# ", &format!("{} ({})", field.about, hint(field))));
             match (values.get(field.path), field.presence) {
                 (Some(value), _) => _ = writeln!(text, "{} = {value}", field.key()),
@@ -30,7 +37,7 @@ pub fn commented(heading: &str, values: &BTreeMap<&str, String>) -> String {
 
 /// The profile of the simulated bench, `host/examples/bench.toml`.
 pub fn example() -> String {
-    let values = FIELDS.iter().map(|field| (field.path, field.example.to_owned())).collect();
+    let values = fields().map(|field| (field.path, field.example.to_owned())).collect();
     commented(
         "Bench profile of the SIMULATED bench: an invented tube, divider and camera.\n\
          Check a profile with `ringvolt bench check FILE`; `ringvolt bench explain` prints every field.",
@@ -43,7 +50,7 @@ pub fn explain() -> String {
     let mut text = String::new();
     for (table, about) in TABLES {
         let _ = write!(text, "[{table}]\n{}\n", wrapped("  ", about));
-        for field in FIELDS.iter().filter(|field| field.table() == *table) {
+        for field in fields().filter(|field| field.table() == *table) {
             let _ = writeln!(text, "  {}", field.key());
             text.push_str(&wrapped("      ", field.about));
             text.push_str(&wrapped("      ", &hint(field)));

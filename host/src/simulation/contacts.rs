@@ -1,140 +1,107 @@
-//! Loops and button with bounce; contactors that follow the permit's square wave.
+//! Contacts that bounce: interlock loops, mirror contacts, the button.
 
 use std::collections::VecDeque;
 
 use rand::RngExt;
 use rand_chacha::ChaCha8Rng;
+use ringvolt_protocol::Line;
 
-use super::draw::stream;
-
-/// A contact whose changes bounce.
+/// One contact as the controller's pin sees it.
 #[derive(Clone, Debug)]
-pub(super) struct Contact {
-    level: bool,
-    changes: VecDeque<(i64, bool)>,
+pub struct Contact {
+    line: Line,
+    /// Longest bounce, nanoseconds.
+    bounce_ns: i64,
+    rng: ChaCha8Rng,
+    active: bool,
+    pending: VecDeque<(i64, bool)>,
 }
 
 impl Contact {
-    pub(super) const fn new(level: bool) -> Self {
-        Self { level, changes: VecDeque::new() }
+    /// A contact at rest.
+    pub(super) fn new(line: Line, active: bool, bounce_ns: i64, rng: ChaCha8Rng) -> Self {
+        Self { line, bounce_ns, rng, active, pending: VecDeque::new() }
     }
 
-    /// The contact moves at this time: it bounces for some milliseconds.
-    pub(super) fn move_to(&mut self, level: bool, now_ns: i64, rng: &mut ChaCha8Rng) {
-        self.changes.clear();
-        let mut at = now_ns;
-        self.changes.push_back((at, level));
-        for _ in 0..rng.random_range(0..5) {
-            at += rng.random_range(30_000..700_000);
-            self.changes.push_back((at, !level));
-            at += rng.random_range(30_000..400_000);
-            self.changes.push_back((at, level));
+    /// Which line.
+    pub const fn line(&self) -> Line {
+        self.line
+    }
+
+    /// The level at the last time that was asked for.
+    pub const fn is_active(&self) -> bool {
+        self.active
+    }
+
+    /// Moves the contact: it touches and parts a few times before it rests.
+    pub(super) fn change(&mut self, now_ns: i64, active: bool) {
+        // What was still bouncing from before is cut short.
+        self.pending.retain(|(time, _)| *time <= now_ns);
+        let resting = self.pending.back().map_or(self.active, |(_, level)| *level);
+        if resting == active {
+            return;
+        }
+        self.pending.push_back((now_ns, active));
+        let bounces = self.rng.random_range(1..6);
+        let mut times: Vec<i64> = (0..2 * bounces).map(|_| now_ns + self.rng.random_range(1..self.bounce_ns)).collect();
+        times.sort_unstable();
+        times.dedup();
+        if times.len() % 2 == 1 {
+            times.pop();
+        }
+        for (index, time) in times.into_iter().enumerate() {
+            self.pending.push_back((time, (index % 2 == 1) == active));
         }
     }
 
-    /// The change that has happened by `now_ns`, if one has; call again until there is none.
-    pub(super) fn change(&mut self, now_ns: i64) -> Option<(i64, bool)> {
-        while let Some((at, level)) = self.changes.front().copied().filter(|(at, _)| *at <= now_ns) {
-            self.changes.pop_front();
-            if level != self.level {
-                self.level = level;
-                return Some((at, level));
-            }
-        }
-        None
+    /// Takes the next edge up to `until_ns`.
+    pub(super) fn next_edge(&mut self, until_ns: i64) -> Option<(i64, bool)> {
+        let edge = *self.pending.front().filter(|(time, _)| *time <= until_ns)?;
+        self.pending.pop_front();
+        self.active = edge.1;
+        Some(edge)
     }
-
-    pub(super) const fn level(&self) -> bool {
-        self.level
-    }
-}
-
-/// Time without an edge after which the charge pump's relay drops, nanoseconds.
-const PUMP_DROPS_NS: i64 = 8_000_000;
-/// Edges it needs in a row to pull in.
-const PUMP_EDGES: u32 = 12;
-/// Time a contactor takes to close or to open, nanoseconds.
-const CONTACTOR_NS: i64 = 18_000_000;
-
-/// The hard-wired chain: permit relay and both loops in series with the contactors' coils.
-#[derive(Clone, Debug, Default)]
-pub(super) struct Chain {
-    permit: bool,
-    edges: u32,
-    last_edge_ns: i64,
-    closed: bool,
-    turn_ns: Option<i64>,
-    pub(super) welded: bool,
-}
-
-impl Chain {
-    /// Lets time pass; tells when the contactors changed.
-    pub(super) fn pass(&mut self, now_ns: i64, permit: bool, loops_closed: bool) -> bool {
-        if permit != self.permit {
-            self.permit = permit;
-            self.edges = self.edges.saturating_add(1);
-            self.last_edge_ns = now_ns;
-        } else if now_ns - self.last_edge_ns > PUMP_DROPS_NS {
-            self.edges = 0;
-        }
-        let driven = (self.edges >= PUMP_EDGES && loops_closed) || (self.welded && self.closed);
-        if driven == self.closed {
-            self.turn_ns = None;
-            return false;
-        }
-        let since = *self.turn_ns.get_or_insert(now_ns);
-        if now_ns - since < CONTACTOR_NS {
-            return false;
-        }
-        self.closed = driven;
-        self.turn_ns = None;
-        true
-    }
-
-    pub(super) const fn is_closed(&self) -> bool {
-        self.closed
-    }
-}
-
-/// Draws for bounces.
-pub(super) fn bounces(seed: u64) -> ChaCha8Rng {
-    stream(seed, 5)
 }
 
 #[cfg(test)]
 mod tests {
+    use rand::SeedableRng;
+
     use super::*;
 
+    fn edges(contact: &mut Contact) -> Vec<(i64, bool)> {
+        std::iter::from_fn(|| contact.next_edge(i64::MAX)).collect()
+    }
+
     #[test]
-    fn a_contact_ends_where_it_was_moved() {
-        let mut rng = bounces(1);
-        for level in [true, false, true] {
-            let mut contact = Contact::new(!level);
-            contact.move_to(level, 1_000, &mut rng);
-            let mut changes = 0;
-            while contact.change(50_000_000).is_some() {
-                changes += 1;
-            }
-            assert_eq!(contact.level(), level);
-            assert!(changes % 2 == 1);
+    fn a_contact_bounces_and_comes_to_rest() {
+        let mut contact = Contact::new(Line::LoopA, true, 3_000_000, ChaCha8Rng::seed_from_u64(2));
+        for (round, active) in [false, true, false, true].into_iter().enumerate() {
+            let at = round as i64 * 1_000_000_000;
+            contact.change(at, active);
+            let edges = edges(&mut contact);
+            assert!(edges.len() >= 3 && edges.len() % 2 == 1, "{edges:?}");
+            assert_eq!(edges[0], (at, active));
+            assert!(edges.windows(2).all(|two| two[0].0 < two[1].0 && two[0].1 != two[1].1), "{edges:?}");
+            assert!(edges.last().unwrap().0 < at + 3_000_000);
+            assert_eq!(contact.is_active(), active);
         }
     }
 
     #[test]
-    fn only_a_square_wave_pulls_the_contactors_in() {
-        let mut chain = Chain::default();
-        let mut closed_at = None;
-        for step in 0..400 {
-            let wave = step % 2 == 0;
-            if chain.pass(step * 500_000, wave, true) {
-                closed_at = Some(step);
-            }
-        }
-        assert!(chain.is_closed() && (40..60).contains(&closed_at.unwrap()));
-        // A stuck level is no permit.
-        for step in 400..500 {
-            chain.pass(step * 500_000, true, true);
-        }
-        assert!(!chain.is_closed());
+    fn moving_it_where_it_is_changes_nothing() {
+        let mut contact = Contact::new(Line::Button, false, 3_000_000, ChaCha8Rng::seed_from_u64(2));
+        contact.change(5, false);
+        assert!(edges(&mut contact).is_empty());
+    }
+
+    #[test]
+    fn a_change_cuts_a_bounce_short() {
+        let mut contact = Contact::new(Line::LoopB, true, 3_000_000, ChaCha8Rng::seed_from_u64(4));
+        contact.change(0, false);
+        contact.change(1, true);
+        let edges = edges(&mut contact);
+        assert_eq!(edges[..2], [(0, false), (1, true)]);
+        assert!(contact.is_active());
     }
 }

@@ -1,182 +1,186 @@
-//! One divider string and its converter: from the tube's voltage to codes.
+//! One converter: integrates over its conversion, adds noise and offset, quantises and saturates.
 
 use rand::RngExt;
 use rand_chacha::ChaCha8Rng;
+use ringvolt_firmware::io::Channel;
 
-use super::draw::{normal, stream};
-use crate::calibration::ChannelFit;
+use super::draws::{normal, within};
 
-/// Nominal conversions per second.
-const RATE: f64 = 860.0;
+/// One step of the converter, volts: 16 bits over +-2.048 V.
+pub const STEP_VOLTS: f64 = 62.5e-6;
+/// Conversions a second by the data sheet.
+const NOMINAL_RATE: f64 = 860.0;
+/// How far the rate may be off (data sheets of such converters say 10 %; a little is left for temperature).
+const RATE_OFF: f64 = 0.095;
 
-/// What may be wrong with a string or its converter.
-#[derive(Clone, Copy, Debug, Default, PartialEq)]
-pub struct StringFault {
-    /// The string reads this factor of the truth (1 + 1/(n - 1) for one of n elements shorted, 2 for half an open low
-    /// side, 0 for an open string).
-    pub factor: Option<f64>,
-    /// The converter stands at the end of its scale (low side open, clamp conducts).
-    pub over_range: bool,
-    /// The converter gives nothing.
-    pub silent: bool,
-    /// The converter repeats its last code.
-    pub frozen: bool,
+/// What is wrong with a converter.
+#[derive(Clone, Copy, Debug, Default, PartialEq, Eq)]
+pub enum ConverterFault {
+    /// Nothing.
+    #[default]
+    None,
+    /// It converts nothing.
+    Silent,
+    /// It gives its last code again and again.
+    Frozen,
 }
 
-/// One string with its converter.
-#[derive(Clone, Debug)]
-pub(super) struct StringAndConverter {
-    /// The true line from codes to volts at the calibration's temperature.
-    fit: ChannelFit,
-    ambient_celsius: f64,
-    temperature_per_kelvin: f64,
-    polarity: f64,
-    filter_seconds: f64,
-    /// Voltage behind the filter, volts at the tube.
-    filtered: f64,
-    period_ns: f64,
-    next_end_ns: f64,
-    integral: f64,
-    integrated_ns: f64,
-    noise_codes: f64,
-    last_code: i16,
-    rng: ChaCha8Rng,
-    pub(super) fault: StringFault,
-}
-
-/// What a string needs to be drawn.
-#[derive(Clone, Debug)]
-pub(super) struct StringSetup {
-    pub fit: ChannelFit,
-    pub ambient_celsius: f64,
-    pub temperature_per_kelvin: f64,
-    pub polarity: f64,
-    pub filter_seconds: f64,
+/// What a converter is like.
+#[derive(Clone, Copy, Debug, PartialEq)]
+pub struct ConverterTraits {
+    /// Conversions a second.
+    pub rate: f64,
+    /// Noise of one conversion, codes (standard deviation).
     pub noise_codes: f64,
+    /// Code at zero volts, before rounding.
+    pub offset_codes: f64,
 }
 
-impl StringAndConverter {
-    pub(super) fn new(setup: StringSetup, seed: u64, subject: u64) -> Self {
-        let mut rng = stream(seed, subject);
-        let period_ns = 1e9 / RATE * (1.0 + rng.random_range(-0.04..0.04));
-        let next_end_ns = period_ns * rng.random_range(0.1..1.0);
-        Self {
-            fit: setup.fit,
-            ambient_celsius: setup.ambient_celsius,
-            temperature_per_kelvin: setup.temperature_per_kelvin,
-            polarity: setup.polarity,
-            filter_seconds: setup.filter_seconds,
-            filtered: 0.0,
-            period_ns,
-            next_end_ns,
-            integral: 0.0,
-            integrated_ns: 0.0,
-            noise_codes: setup.noise_codes,
-            last_code: 0,
-            rng,
-            fault: StringFault::default(),
-        }
+impl ConverterTraits {
+    /// What this generator gives; the offset belongs to the certificate.
+    pub(super) fn draw(rng: &mut ChaCha8Rng, offset_codes: f64, noise_codes: f64) -> Self {
+        Self { rate: NOMINAL_RATE * (1.0 + within(rng, RATE_OFF)), noise_codes, offset_codes }
+    }
+}
+
+/// One converter.
+#[derive(Clone, Debug)]
+pub struct Converter {
+    channel: Channel,
+    traits: ConverterTraits,
+    rng: ChaCha8Rng,
+    fault: ConverterFault,
+    period_ns: f64,
+    /// End of the conversion under way, and the integral of the filtered voltage at its beginning.
+    end_ns: f64,
+    begun: Option<Begun>,
+    last_code: i16,
+}
+
+#[derive(Clone, Copy, Debug)]
+struct Begun {
+    at_ns: i64,
+    integral: f64,
+}
+
+impl Converter {
+    /// Begins with a conversion of unknown phase.
+    pub(super) fn new(channel: Channel, traits: ConverterTraits, mut rng: ChaCha8Rng) -> Self {
+        let period_ns = 1e9 / traits.rate;
+        let end_ns = period_ns * rng.random_range(0.0..1.0);
+        Self { channel, traits, rng, fault: ConverterFault::None, period_ns, end_ns, begun: None, last_code: 0 }
     }
 
-    /// Lets a step pass in which the tube had this mean voltage; gives the conversion that ended within it, as its end
-    /// (nanoseconds of true time) and code.
-    pub(super) fn pass(&mut self, from_ns: i64, to_ns: i64, volts: f64, celsius: f64) -> Option<(i64, i16)> {
-        let seconds = (to_ns - from_ns) as f64 * 1e-9;
-        if self.filter_seconds > 0.0 {
-            self.filtered = volts + (self.filtered - volts) * libm::exp(-seconds / self.filter_seconds);
-        } else {
-            self.filtered = volts;
-        }
-        let end = self.next_end_ns;
-        if end > to_ns as f64 {
-            self.integrate((to_ns - from_ns) as f64);
-            return None;
-        }
-        self.integrate(end - from_ns as f64);
-        let mean = self.integral / self.integrated_ns.max(1.0);
-        (self.integral, self.integrated_ns) = (0.0, 0.0);
-        self.integrate(to_ns as f64 - end);
-        self.next_end_ns += self.period_ns;
-        let code = self.code(mean, celsius);
-        (!self.fault.silent).then_some((end as i64, code))
+    /// Whose converter.
+    pub const fn channel(&self) -> Channel {
+        self.channel
     }
 
-    fn integrate(&mut self, ns: f64) {
-        self.integral += self.filtered * ns;
-        self.integrated_ns += ns;
+    /// What it is like.
+    pub const fn traits(&self) -> &ConverterTraits {
+        &self.traits
     }
 
-    fn code(&mut self, volts: f64, celsius: f64) -> i16 {
-        let noise = normal(&mut self.rng, self.noise_codes);
-        if self.fault.frozen {
-            return self.last_code;
+    /// Breaks or mends it.
+    pub(super) fn set_fault(&mut self, fault: ConverterFault) {
+        self.fault = fault;
+    }
+
+    /// When the conversion under way ends, true nanoseconds.
+    pub(super) fn end_ns(&self) -> i64 {
+        self.end_ns as i64
+    }
+
+    /// Ends the conversion under way, given the integral of the filtered voltage (volt seconds) at its end and the
+    /// string's law from mean volts to tap volts. `None` for the very first, whose beginning nobody saw, and while
+    /// silent.
+    pub(super) fn finish(&mut self, integral: f64, tap_volts: impl FnOnce(f64) -> f64) -> Option<i16> {
+        let at_ns = self.end_ns();
+        self.end_ns += self.period_ns;
+        let begun = self.begun.replace(Begun { at_ns, integral })?;
+        // Drawn whatever the fault, so that a fault shifts nothing that comes after it.
+        let noise = self.traits.noise_codes * normal(&mut self.rng);
+        let mean = (integral - begun.integral) / ((at_ns - begun.at_ns) as f64 * 1e-9);
+        let exact = tap_volts(mean) / STEP_VOLTS + self.traits.offset_codes + noise;
+        let code = libm::rint(exact).clamp(f64::from(i16::MIN), f64::from(i16::MAX)) as i16;
+        match self.fault {
+            ConverterFault::None => {
+                self.last_code = code;
+                Some(code)
+            }
+            ConverterFault::Frozen => Some(self.last_code),
+            ConverterFault::Silent => None,
         }
-        let drifted = 1.0 + self.temperature_per_kelvin * (celsius - self.ambient_celsius);
-        let signed = self.polarity * volts * self.fault.factor.unwrap_or(1.0) / drifted;
-        let code = libm::round(self.fit.code(signed) + noise);
-        self.last_code = if self.fault.over_range { i16::MAX } else { code.clamp(-32_768.0, 32_767.0) as i16 };
-        self.last_code
     }
 }
 
 #[cfg(test)]
 mod tests {
+    use rand::SeedableRng;
+
     use super::*;
 
-    fn string(filter_seconds: f64, noise_codes: f64) -> StringAndConverter {
-        let fit = ChannelFit {
-            coefficients: [0.2, 0.3125625, 0.0],
-            covariance: [[0.0; 3]; 3],
-            residual_volts: 0.0,
-            hysteresis_fraction: 0.0,
-            code_min: 0,
-            code_max: 32_000,
-        };
-        let setup = StringSetup {
-            fit,
-            ambient_celsius: 23.0,
-            temperature_per_kelvin: 5e-6,
-            polarity: 1.0,
-            filter_seconds,
-            noise_codes,
-        };
-        StringAndConverter::new(setup, 3, 4)
+    fn converter(noise_codes: f64) -> Converter {
+        let traits = ConverterTraits { rate: 900.0, noise_codes, offset_codes: 2.25 };
+        Converter::new(Channel::Sense, traits, ChaCha8Rng::seed_from_u64(5))
     }
 
-    fn run(string: &mut StringAndConverter, seconds: f64, volts: impl Fn(f64) -> f64) -> Vec<(i64, i16)> {
-        let step = 250_000;
-        let count = (seconds * 1e9) as i64 / step;
+    /// Codes for a constant voltage at the tap over some conversions.
+    fn codes(converter: &mut Converter, tap: f64, count: usize) -> Vec<i16> {
         (0..count)
-            .filter_map(|i| string.pass(i * step, (i + 1) * step, volts((i as f64 + 0.5) * 250e-6), 23.0))
+            .filter_map(|_| {
+                let integral = tap * converter.end_ns() as f64 * 1e-9;
+                converter.finish(integral, |mean| mean)
+            })
             .collect()
     }
 
     #[test]
-    fn codes_follow_the_line_and_the_rate_is_near_nominal() {
-        let conversions = run(&mut string(0.0, 0.0), 2.0, |_| 2_500.7);
-        assert!(conversions.iter().skip(1).all(|(_, code)| *code == 8_000));
-        assert!((1_640..=1_800).contains(&conversions.len()), "{}", conversions.len());
-    }
-
-    #[test]
-    fn the_filter_settles_with_its_time_constant() {
-        let conversions = run(&mut string(0.05, 0.0), 0.5, |_| 2_500.7);
-        for (end_ns, code) in conversions.iter().skip(3) {
-            let middle = *end_ns as f64 * 1e-9 - 0.58e-3;
-            let expected = 8_000.0 * (1.0 - (-middle / 0.05f64).exp());
-            assert!((f64::from(*code) - expected).abs() < 40.0, "{code} {expected}");
+    fn conversions_come_at_its_own_rate() {
+        let mut converter = converter(0.5);
+        let first = converter.end_ns();
+        codes(&mut converter, 1.0, 9_000);
+        assert!(((converter.end_ns() - first) as f64 * 1e-9 - 10.0).abs() < 1e-6);
+        let mut rng = ChaCha8Rng::seed_from_u64(1);
+        for _ in 0..100 {
+            let rate = ConverterTraits::draw(&mut rng, 0.0, 0.6).rate;
+            assert!((rate / 860.0 - 1.0).abs() < 0.1);
         }
     }
 
     #[test]
-    fn faults_look_as_they_should() {
-        let mut faulty = string(0.0, 0.5);
-        faulty.fault.factor = Some(0.0);
-        assert!(run(&mut faulty, 0.1, |_| 2_500.0).iter().all(|(_, code)| code.abs() < 5));
-        faulty.fault = StringFault { over_range: true, ..StringFault::default() };
-        assert!(run(&mut faulty, 0.1, |_| 2_500.0).iter().all(|(_, code)| *code == i16::MAX));
-        faulty.fault = StringFault { silent: true, ..StringFault::default() };
-        faulty.next_end_ns = 0.0;
-        assert!(run(&mut faulty, 0.1, |_| 2_500.0).is_empty());
+    fn noise_dithers_the_mean_below_a_code() {
+        let mut converter = converter(0.6);
+        let got = codes(&mut converter, 1000.3 * STEP_VOLTS, 40_000);
+        let mean = got.iter().map(|code| f64::from(*code)).sum::<f64>() / got.len() as f64;
+        assert!((mean - 1_002.55).abs() < 0.015, "{mean}");
+        let variance = got.iter().map(|code| (f64::from(*code) - mean).powi(2)).sum::<f64>() / got.len() as f64;
+        // Quantisation adds a twelfth.
+        assert!((variance - 0.36 - 1.0 / 12.0).abs() < 0.02, "{variance}");
+    }
+
+    #[test]
+    fn it_integrates_over_its_conversion() {
+        let mut converter = converter(0.0);
+        // A ramp of one volt a second: the mean is the value at the middle.
+        let integral = |ns: i64| 0.5 * (ns as f64 * 1e-9).powi(2);
+        converter.finish(integral(converter.end_ns()), |mean| mean);
+        let (begin, end) = (converter.end_ns() - (1e9 / 900.0) as i64, converter.end_ns());
+        let code = converter.finish(integral(end), |mean| mean).unwrap();
+        let expected = (begin + end) as f64 * 0.5e-9 / STEP_VOLTS + 2.25;
+        assert!((f64::from(code) - expected).abs() <= 0.51);
+    }
+
+    #[test]
+    fn it_saturates_freezes_and_falls_silent() {
+        let mut converter = converter(0.5);
+        assert_eq!(codes(&mut converter, 5.0, 3), [i16::MAX; 2]);
+        codes(&mut converter, 1.0, 3);
+        converter.set_fault(ConverterFault::Frozen);
+        let frozen = codes(&mut converter, 0.5, 20);
+        assert!(frozen.windows(2).all(|two| two[0] == two[1]));
+        assert!(frozen[0] > 15_000);
+        converter.set_fault(ConverterFault::Silent);
+        assert!(codes(&mut converter, 0.5, 20).is_empty());
     }
 }

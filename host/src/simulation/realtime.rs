@@ -137,7 +137,7 @@ fn turn(
 
 fn paint(bench: &Bench, zero_utc_ns: i64, shots: &Receiver<Shot>) -> Result<(), SimulationError> {
     for shot in shots {
-        let grey = render(&bench.optics, &shot.voltages, bench.setup.seed, shot.number);
+        let grey = render(&bench.optics, &shot, bench.setup.seed);
         let tags =
             Tags { start_utc_ns: zero_utc_ns + shot.stated_start_ns, exposure_seconds: shot.stated_exposure_seconds };
         write_picture(&bench.frames, &shot.name, (bench.optics.width, bench.optics.height), &grey, &tags)?;
