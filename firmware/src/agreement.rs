@@ -23,9 +23,12 @@ const STEADY_PPM: i64 = 50_000;
 const LAG_US: i64 = 5_000;
 /// One sense is lost when the other is above this, millivolts.
 const LOST_FROM_MV: i64 = 100_000;
+/// In so many windows in a row: one alone may lie on the edge of switching on.
+const LOST_WINDOWS: u8 = 3;
 /// Above this something is live, millivolts: 60 V dc, the usual touch limit (EN 61010-1, from memory).
 pub const LIVE_MV: i32 = 60_000;
-/// An arc takes at least this part of the voltage within one window, per mille.
+/// An arc takes at least this part of the voltage from the mean of one window to the lowest conversion of the next, per
+/// mille: a breakdown that recovers within milliseconds would be lost in a mean.
 const ARC_PER_MILLE: i64 = 150;
 
 /// Means over one block.
@@ -50,9 +53,11 @@ pub struct Agreement {
     held: usize,
     /// Running ratio of sense to cross-sense, ppm, and the blocks it rests on.
     ratio_ppm: Option<i64>,
-    /// Sense of the last window, for arcs.
-    last_mv: Option<i64>,
+    /// Main sense and cross-sense of the last window, for arcs.
+    last_mv: Option<(i64, i64)>,
     trips: TripSet,
+    /// The sense that seems lost, and in how many windows in a row.
+    lost: Option<(Trip, u8)>,
     arc: bool,
 }
 
@@ -78,6 +83,10 @@ pub struct WindowVolts {
     pub sense_mv: Option<i32>,
     /// Cross-sense; `None` without a conversion.
     pub cross_mv: Option<i32>,
+    /// Lowest conversion of the main sense.
+    pub sense_low_mv: Option<i32>,
+    /// Lowest conversion of the cross-sense.
+    pub cross_low_mv: Option<i32>,
 }
 
 impl Agreement {
@@ -88,8 +97,19 @@ impl Agreement {
             return;
         };
         let (sense, cross) = (i64::from(sense), i64::from(cross));
-        self.arc = judge.permit && self.last_mv.is_some_and(|last| broke_down(last, sense, window, judge.bleed_ms));
-        self.last_mv = Some(sense);
+        // Both must fall: one that falls alone is an open string, and the voltage is still there.
+        let low = |low_mv: Option<i32>, mean_mv: i64| low_mv.map_or(mean_mv, i64::from);
+        self.arc = judge.permit
+            && self.last_mv.is_some_and(|(last_sense, last_cross)| {
+                let (sense_low, cross_low) = (low(window.sense_low_mv, sense), low(window.cross_low_mv, cross));
+                broke_down(last_sense, sense_low, ARC_PER_MILLE, window, judge.bleed_ms)
+                    && broke_down(last_cross, cross_low, ARC_PER_MILLE / 2, window, judge.bleed_ms)
+            });
+        self.last_mv = Some((sense, cross));
+        self.lost = lost(sense, cross).map(|trip| match self.lost {
+            Some((same, run)) if same == trip => (trip, run.saturating_add(1)),
+            _ => (trip, 1),
+        });
         if self.windows == 0 {
             self.from_us = window.time_us;
             (self.sums.low_mv, self.sums.high_mv) = (sense, sense);
@@ -120,7 +140,11 @@ impl Agreement {
         self.blocks[0] = block;
         self.held = (self.held + 1).min(BLOCKS + 1);
         self.trips = TripSet::EMPTY;
-        if let Some(trip) = lost(&block).or_else(|| self.disagrees(judge)).or_else(|| self.stepped(judge)) {
+        // A sense that is being lost disagrees too, but that is not what is wrong.
+        if self.lost.is_some() {
+            return;
+        }
+        if let Some(trip) = self.disagrees(judge).or_else(|| self.stepped(judge)) {
             self.trips.insert(trip);
         }
     }
@@ -182,6 +206,9 @@ impl Agreement {
     /// What the senses have against each other now.
     pub fn trips(&self) -> TripSet {
         let mut trips = self.trips;
+        if let Some((trip, LOST_WINDOWS..)) = self.lost {
+            trips.insert(trip);
+        }
         if self.arc {
             trips.insert(Trip::Arc);
         }
@@ -195,8 +222,8 @@ impl Agreement {
     }
 }
 
-fn lost(block: &Block) -> Option<Trip> {
-    let (sense, cross) = (block.sense_mv.abs(), block.cross_mv.abs());
+fn lost(sense_mv: i64, cross_mv: i64) -> Option<Trip> {
+    let (sense, cross) = (sense_mv.abs(), cross_mv.abs());
     if cross > LOST_FROM_MV && sense * 10 < cross {
         Some(Trip::SenseLost)
     } else if sense > LOST_FROM_MV && cross * 10 < sense {
@@ -206,11 +233,12 @@ fn lost(block: &Block) -> Option<Trip> {
     }
 }
 
-/// Whether the voltage fell by more than 15 %, and by more than twice what bleeding through its resistors takes.
-fn broke_down(last_mv: i64, now_mv: i64, window: &WindowVolts, bleed_ms: u16) -> bool {
+/// Whether the voltage fell by more than this part, and by more than twice what bleeding through its resistors takes
+/// within two windows.
+fn broke_down(last_mv: i64, now_mv: i64, per_mille: i64, window: &WindowVolts, bleed_ms: u16) -> bool {
     let fell = last_mv - now_mv;
-    let bled_per_mille = if bleed_ms == 0 { 0 } else { 2 * i64::from(window.duration_us) / i64::from(bleed_ms) };
-    last_mv > RATIO_FROM_MV && fell * 1_000 > last_mv * ARC_PER_MILLE.max(bled_per_mille)
+    let bled_per_mille = if bleed_ms == 0 { 0 } else { 4 * i64::from(window.duration_us) / i64::from(bleed_ms) };
+    last_mv > RATIO_FROM_MV && fell * 1_000 > last_mv * per_mille.max(bled_per_mille)
 }
 
 #[cfg(test)]
@@ -237,6 +265,8 @@ mod tests {
                 duration_us: 10_000,
                 sense_mv: Some((sense * 1e3) as i32),
                 cross_mv: Some((cross * 1e3) as i32),
+                sense_low_mv: None,
+                cross_low_mv: None,
             };
             agreement.take(&window, &judge);
             if agreement.trips() != TripSet::EMPTY {
@@ -276,8 +306,14 @@ mod tests {
         for index in 0..700u64 {
             let (sense, cross) = open(index as f64 * 0.01);
             let mv = |volts: f64| Some((volts * 1e3) as i32);
-            let window =
-                WindowVolts { time_us: index * 10_000, duration_us: 10_000, sense_mv: mv(sense), cross_mv: mv(cross) };
+            let window = WindowVolts {
+                time_us: index * 10_000,
+                duration_us: 10_000,
+                sense_mv: mv(sense),
+                cross_mv: mv(cross),
+                sense_low_mv: None,
+                cross_low_mv: None,
+            };
             agreement.take(&window, &judge);
         }
         assert_eq!(agreement.trips(), only(Trip::SenseLost));

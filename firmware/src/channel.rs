@@ -14,8 +14,8 @@ pub const SCALE_END: i16 = 32_760;
 const FROZEN_RUN: u16 = 128;
 /// How far the other sense must move meanwhile, codes: beyond eight standard deviations of noise of 2 codes.
 const FROZEN_MOVE: u16 = 24;
-/// Noise is judged over this many conversions, about a second.
-const NOISE_RUN: u32 = 860;
+/// Noise is judged over this many conversions: a second of the slowest converter (10 % below 860 a second).
+const NOISE_RUN: u32 = 774;
 
 /// Watches one converter.
 #[derive(Clone, Debug)]
@@ -192,10 +192,10 @@ mod tests {
     #[test]
     fn a_second_without_noise_is_frozen_and_a_quiet_converter_is_not() {
         let mut watch = ChannelWatch::new(0);
-        feed(&mut watch, (0..860).map(|_| (8_000, 7_000)));
+        feed(&mut watch, (0..774).map(|_| (8_000, 7_000)));
         assert!(watch.is_frozen());
         // One code in fifty differs: a standard deviation of 0.14 codes.
-        feed(&mut watch, (0..860).map(|index| (if index % 50 == 0 { 8_001 } else { 8_000 }, 7_000)));
+        feed(&mut watch, (0..774).map(|index| (if index % 50 == 0 { 8_001 } else { 8_000 }, 7_000)));
         assert!(!watch.is_frozen());
     }
 }

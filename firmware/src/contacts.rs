@@ -10,6 +10,10 @@ pub const GLITCH_US: u64 = 200;
 /// A loop that has not been closed for [`GLITCH_US`] in a row within this time chatters, and counts as open, microseconds.
 pub const CHATTER_US: u64 = 2_000;
 
+/// After power-up the levels are not known before this time, microseconds: until then a line reads open because nothing
+/// is known of it, and that must not pass for a loop that was seen open.
+const UNKNOWN_US: u64 = 5_000;
+
 /// One filtered line.
 #[derive(Clone, Copy, Debug)]
 struct Filter {
@@ -70,6 +74,8 @@ pub struct Change {
 #[derive(Clone, Debug)]
 pub struct Lines {
     filters: [Filter; 4],
+    began_us: Option<u64>,
+    known: bool,
 }
 
 impl Default for Lines {
@@ -88,11 +94,15 @@ impl Lines {
                 Filter::new(Line::Contactors),
                 Filter::new(Line::Button),
             ],
+            began_us: None,
+            known: false,
         }
     }
 
     /// Takes the edges since the last poll and the levels now; gives the changes that have lasted.
     pub fn update(&mut self, now_us: u64, edges: &[Edge], levels: Contacts) -> Vec<Change, 4> {
+        let began_us = *self.began_us.get_or_insert(now_us);
+        self.known |= now_us.saturating_sub(began_us) >= UNKNOWN_US;
         for edge in edges {
             if let Some(filter) = self.filters.iter_mut().find(|filter| filter.line == edge.line) {
                 filter.see(edge.active, edge.time_us.min(now_us));
@@ -109,6 +119,11 @@ impl Lines {
             }
         }
         changes
+    }
+
+    /// Whether the lines were watched for long enough after power-up to say anything.
+    pub const fn are_known(&self) -> bool {
+        self.known
     }
 
     /// The filtered levels.

@@ -5,7 +5,7 @@ use core::borrow::BorrowMut;
 use ringvolt_protocol::{
     CertificateHash, CertificateRecord, Contacts, EventKind, HostHello, LampSettings, Line, PROTOCOL_VERSION, Reading,
     ReadingFlags, Refusal, Request, ResetCause, SettingsRecord, Slow, Status, ToDevice, ToHost, Trip, TripSet,
-    lamp::Sequence,
+    WindowCodes, lamp::Sequence,
 };
 
 use crate::{
@@ -154,8 +154,10 @@ impl<J: BorrowMut<Journal>> Controller<J> {
         let causes = self.causes(now_us, inputs);
         let contacts = self.lines.contacts();
         let elapsed_us = u32::try_from(elapsed_us).unwrap_or(u32::MAX);
-        let changes = self.interlock.step(elapsed_us, contacts, causes);
-        self.tell(now_us, &changes);
+        if self.lines.are_known() {
+            let changes = self.interlock.step(elapsed_us, contacts, causes);
+            self.tell(now_us, &changes);
+        }
         self.turn_permit(now_us);
         self.turn_lamp(now_us);
         self.take_outcome(inputs);
@@ -302,11 +304,17 @@ impl<J: BorrowMut<Journal>> Controller<J> {
         }
         let sign = self.settings.polarity.sign() as i32;
         let tube_mv = |mv: Option<i32>| mv.and_then(|mv| mv.checked_mul(sign));
+        let low_mv = |line, codes: &WindowCodes| {
+            let lowest = if sign > 0 { codes.min } else { codes.max };
+            tube_mv(millivolts(line, i32::from(lowest), 1))
+        };
         let window = WindowVolts {
             time_us: reading.time_us,
             duration_us: reading.duration_us,
             sense_mv: tube_mv(millivolts(&certificate.sense, reading.sense.sum, reading.sense.count)),
             cross_mv: tube_mv(millivolts(&certificate.cross, reading.cross.sum, reading.cross.count)),
+            sense_low_mv: low_mv(&certificate.sense, &reading.sense),
+            cross_low_mv: low_mv(&certificate.cross, &reading.cross),
         };
         let judge = Judge { certificate, bleed_ms: self.settings.bleed_ms, permit: self.interlock.is_given() };
         self.agreement.take(&window, &judge);

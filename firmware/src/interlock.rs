@@ -320,8 +320,6 @@ impl Interlock {
             self.latched = TripSet::EMPTY;
             self.present = TripSet::EMPTY;
             self.phase = Phase::Given { uncalibrated: !calibrated };
-            self.contactor_us = 0;
-            self.lone_us = None;
             return changes;
         }
         self.phase = Phase::Withdrawn { armed: true };
@@ -338,7 +336,6 @@ impl Interlock {
     fn withdraw(&mut self, contacts: Contacts) {
         self.phase = Phase::Withdrawn { armed: false };
         self.restart_loop_test(contacts);
-        self.contactor_us = 0;
     }
 }
 

@@ -11,7 +11,7 @@ use std::{
 };
 
 use ringvolt_firmware::interlock::{Changes, Interlock, InterlockTimes};
-use ringvolt_protocol::{Contacts, Trip, TripSet};
+use ringvolt_protocol::{Contacts, PermitState, Trip, TripSet};
 
 const TIMES: InterlockTimes =
     InterlockTimes { discrepancy_us: 2, contactor_us: 2, press_us: (1, 2), long_us: (4, 5), stuck_us: 7 };
@@ -57,6 +57,10 @@ impl Shown {
         self.closed_after = closed && self.opened;
         self.opened |= !closed;
     }
+
+    const fn opened_by(self, closed: bool) -> bool {
+        self.opened || !closed
+    }
 }
 
 /// Remembers the wires; knows nothing of the machine but whether the permit was given and a disagreement was told.
@@ -72,8 +76,8 @@ struct Monitor {
     down: u32,
     differ: u32,
     unfollowed: u32,
-    /// How long ago the permit was withdrawn by one loop alone, until a cause is latched.
-    unexplained: Option<u32>,
+    /// How long ago one loop alone withdrew the permit, until the other follows or the discrepancy time is over.
+    lone: Option<u32>,
 }
 
 /// What the monitor allows in one step.
@@ -101,7 +105,7 @@ impl Monitor {
         let follows = contacts.contactors_released != given;
         self.unfollowed = run(self.unfollowed, !follows, elapsed, TIMES.contactor_us);
         self.press = self.press.map(|press| run(press, true, elapsed, TIMES.long_us.1 + 1));
-        self.unexplained = self.unexplained.map(|since| run(since, true, elapsed, TIMES.discrepancy_us));
+        self.lone = self.lone.map(|lone| run(lone, true, elapsed, TIMES.discrepancy_us));
     }
 
     /// While the permit is withdrawn: what this step may do.
@@ -175,10 +179,20 @@ fn step(state: &(Interlock, Monitor), elapsed: u32, contacts: Contacts, causes: 
             monitor = Monitor { down: monitor.down, differ: monitor.differ, ..Monitor::default() };
             monitor.a.see(contacts.loop_a_closed);
             monitor.b.see(contacts.loop_b_closed);
-            monitor.unexplained = (interlock.latched() == TripSet::EMPTY).then_some(0);
-            assert!(monitor.unexplained.is_none() || contacts.loop_a_closed != contacts.loop_b_closed);
+            let one_open = contacts.loop_a_closed != contacts.loop_b_closed;
+            monitor.lone = one_open.then_some(0);
+            assert!(one_open || interlock.latched() != TripSet::EMPTY, "a withdrawal has a cause");
         }
     } else {
+        let both_opened = monitor.a.opened_by(contacts.loop_a_closed) && monitor.b.opened_by(contacts.loop_b_closed);
+        let told_now = |trip| changes.latched.contains(trip);
+        assert!(!told_now(Trip::LoopOpened) || both_opened, "an opening is told only when both loops opened");
+        let alone = !both_opened && monitor.lone.is_some_and(|lone| lone >= TIMES.discrepancy_us);
+        assert!(monitor.lone.is_none() || !both_opened || told(Trip::LoopOpened), "loops that open together are told");
+        assert!(!alone || told(Trip::LoopsDisagree), "a loop that opens alone is told");
+        monitor.lone = monitor.lone.filter(|_| !both_opened && !alone);
+        let differ = monitor.differ >= TIMES.discrepancy_us;
+        assert!(!told_now(Trip::LoopsDisagree) || differ || alone, "a disagreement is told only when there is one");
         let allowed = monitor.judge(contacts, causes, disagreed);
         assert_eq!(interlock.is_given(), allowed != Allowed::Nothing, "the permit is given exactly when it may be");
         assert_eq!(changes.uncalibrated_start, allowed == Allowed::UncalibratedStart);
@@ -189,13 +203,8 @@ fn step(state: &(Interlock, Monitor), elapsed: u32, contacts: Contacts, causes: 
             assert!(monitor.differ < TIMES.discrepancy_us || told(Trip::LoopsDisagree), "a disagreement is told");
         }
     }
-    if monitor.unexplained.is_some_and(|since| since >= TIMES.discrepancy_us) {
-        assert!(told(Trip::LoopOpened) || told(Trip::LoopsDisagree), "an opening is told within the discrepancy time");
-    }
-    if interlock.latched() != TripSet::EMPTY {
-        monitor.unexplained = None;
-    }
     check_always(&before, &interlock, &changes, contacts, causes);
+    check_shown(&interlock, &monitor, contacts);
     (interlock, monitor)
 }
 
@@ -212,7 +221,8 @@ fn check_given(before: &Interlock, after: &Interlock, monitor: &Monitor, contact
     assert_eq!(after.is_given(), stays, "the permit stays exactly while all is well, and goes in the very step");
     let told = |trip| after.latched().contains(trip);
     assert!(monitor.unfollowed < TIMES.contactor_us || told(Trip::ContactorDropped));
-    assert!(both_closed(contacts) || contacts.loop_a_closed || contacts.loop_b_closed || told(Trip::LoopOpened));
+    assert_eq!(told(Trip::LoopOpened), !contacts.loop_a_closed && !contacts.loop_b_closed);
+    assert_eq!(told(Trip::LoopsDisagree), monitor.differ >= TIMES.discrepancy_us);
 }
 
 /// From any state.
@@ -237,6 +247,27 @@ fn check_always(before: &Interlock, after: &Interlock, changes: &Changes, contac
     if !given && !before.is_given() {
         assert_eq!(causes.0 & !after.latched().0, 0, "a cause latches while the permit is withdrawn too");
     }
+}
+
+/// What a screen is told the controller waits for is what it waits for.
+fn check_shown(interlock: &Interlock, monitor: &Monitor, contacts: Contacts) {
+    let mut others = interlock.present();
+    others.remove(Trip::NoCertificate);
+    let proven = monitor.a.closed_after && monitor.b.closed_after;
+    let expected = if interlock.is_given() {
+        PermitState::Given
+    } else if monitor.press.is_some() {
+        PermitState::AwaitingRelease
+    } else if others != TripSet::EMPTY || !both_closed(contacts) {
+        PermitState::Withdrawn
+    } else if !proven {
+        PermitState::AwaitingLoopTest
+    } else if contacts.contactors_released {
+        PermitState::AwaitingPress
+    } else {
+        PermitState::Withdrawn
+    };
+    assert_eq!(interlock.permit_state(contacts), expected);
 }
 
 /// From every state there is a way back: everything put right, both loops cycled, one press.

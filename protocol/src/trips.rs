@@ -116,7 +116,7 @@ pub const TRIPS: [TripRow; 23] = [
     TripRow {
         trip: Trip::SenseLost,
         code: "sense-lost",
-        detection: "the main sense reads less than a tenth of the cross-sense, which is above 100 V, over 100 ms",
+        detection: "the main sense reads less than a tenth of the cross-sense, which is above 100 V, in three windows in a row",
         latency_us: 220_000,
         sentence: "The main divider reads nothing though voltage is there (open string?): treat as live.",
         clearing: "the senses agree again",
@@ -125,7 +125,7 @@ pub const TRIPS: [TripRow; 23] = [
     TripRow {
         trip: Trip::CrossLost,
         code: "cross-lost",
-        detection: "the cross-sense reads less than a tenth of the main sense, which is above 100 V, over 100 ms",
+        detection: "the cross-sense reads less than a tenth of the main sense, which is above 100 V, in three windows in a row",
         latency_us: 220_000,
         sentence: "The second divider reads nothing though voltage is there (open string?): treat as live.",
         clearing: "the senses agree again",
@@ -179,7 +179,7 @@ pub const TRIPS: [TripRow; 23] = [
     TripRow {
         trip: Trip::Arc,
         code: "arc",
-        detection: "above 300 V, the voltage falls within one window by more than 15 % and twice what bleeding can explain",
+        detection: "above 300 V, a conversion of the main sense lies more than 15 % below the window before, and one of the cross-sense half of that, both by more than twice what bleeding explains",
         latency_us: 25_000,
         sentence: "The voltage broke down (an arc?): check the vacuum before the next start.",
         clearing: "none beyond the usual",
