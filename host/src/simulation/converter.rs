@@ -76,11 +76,6 @@ impl Converter {
         self.channel
     }
 
-    /// What it is like.
-    pub const fn traits(&self) -> &ConverterTraits {
-        &self.traits
-    }
-
     /// Breaks or mends it.
     pub(super) fn set_fault(&mut self, fault: ConverterFault) {
         self.fault = fault;

@@ -56,11 +56,6 @@ impl DividerString {
         }
     }
 
-    /// What it is like.
-    pub const fn traits(&self) -> &StringTraits {
-        &self.traits
-    }
-
     /// Breaks or mends it.
     pub(super) fn set_fault(&mut self, fault: StringFault) {
         self.fault = fault;
