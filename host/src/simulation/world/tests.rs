@@ -293,3 +293,25 @@ fn nobody_reading_blocks_nothing() {
     world.happen(What::Unplug);
     assert!(world.outgoing().is_empty());
 }
+
+/// Prints how fast virtual time passes; asserts nothing about it, since machines differ.
+#[test]
+fn an_hour_passes_without_a_false_trip_and_with_every_reading() {
+    let mut setup = example_setup(Scenario::steady(3_000.0), 12);
+    setup.camera.pictures = false;
+    let (mut world, mut host) = begin(&setup);
+    let began = std::time::Instant::now();
+    let mut count = 0;
+    for second in 1..=3_600 {
+        host.pass(&mut world, f64::from(second));
+        count += host.readings.len();
+        host.readings.clear();
+        host.bytes.clear();
+        shots(&mut world);
+    }
+    println!("an hour of virtual time in {:.2} s", began.elapsed().as_secs_f64());
+    assert_eq!(host.trips, [Trip::HostLost]);
+    // The crystal is at most 40 ppm off, and the last windows are still open.
+    assert!((359_980..=360_015).contains(&count), "{count}");
+    assert!(world.is_powered());
+}
