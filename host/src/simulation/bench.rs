@@ -11,7 +11,7 @@ use super::{
 use crate::{
     calibration::{self, Certificate},
     physics::{Material, MaterialError, Model, Screen},
-    profile::{self, Profile, ScreenShape, SettingsError, TimeSource},
+    profile::{Profile, ScreenShape, SettingsError, TimeSource},
 };
 use thiserror::Error;
 
@@ -81,13 +81,10 @@ fn supply(profile: &Profile, seed: u64) -> SupplySetup {
     }
 }
 
-/// The built-in bench.
-///
-/// # Panics
-/// Never: that profile and certificate make a bench is checked by a test.
+/// The built-in bench, for tests.
 #[cfg(test)]
 pub(crate) fn example_setup(scenario: Scenario, seed: u64) -> Setup {
-    let profile = Profile::parse(&profile::example(), "the built-in bench").unwrap();
+    let profile = Profile::parse(&crate::profile::example(), "the built-in bench").unwrap();
     setup(&profile, &calibration::example(), scenario, seed).unwrap()
 }
 
@@ -141,7 +138,7 @@ mod tests {
     fn the_built_in_bench_can_be_made() {
         let setup = example_setup(Scenario::steady(2_500.0), 1);
         assert_eq!(setup.stored.unwrap().hash, calibration::example().hash8());
-        let profile = Profile::parse(&profile::example(), "the built-in bench").unwrap();
+        let profile = Profile::parse(&crate::profile::example(), "the built-in bench").unwrap();
         let (one, other) = (optics(&profile, 1).unwrap(), optics(&profile, 2).unwrap());
         assert_ne!(one, other);
         assert!((one.screen.to_screen() - 0.130).abs() <= 0.002);

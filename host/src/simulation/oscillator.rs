@@ -56,7 +56,8 @@ impl DeviceClock {
     }
 
     /// How fast it runs against true time, ppm.
-    pub fn rate_ppm(&self) -> f64 {
+    #[cfg(test)]
+    fn rate_ppm(&self) -> f64 {
         (self.us_per_ns * 1e3 - 1.0) * 1e6
     }
 }
