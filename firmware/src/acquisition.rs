@@ -52,12 +52,14 @@ pub struct Acquisition {
     /// Nanoseconds by which the last edge lies behind its microsecond.
     remainder_ns: u32,
     started: bool,
+    /// The last pause of the main loop, from and to.
+    pause_us: (u64, u64),
 }
 
 impl Acquisition {
     /// With windows of this length, nanoseconds.
     pub fn new(window_ns: u32) -> Self {
-        Self { window_ns, windows: [Window::default(); 2], remainder_ns: 0, started: false }
+        Self { window_ns, windows: [Window::default(); 2], remainder_ns: 0, started: false, pause_us: (0, 0) }
     }
 
     /// New windows have this length; the present ones keep theirs.
@@ -97,6 +99,11 @@ impl Acquisition {
         }
     }
 
+    /// Nothing was polled between these times: every window that overlaps them is [`ReadingFlags::LATE`].
+    pub fn paused(&mut self, from_us: u64, to_us: u64) {
+        self.pause_us = (from_us, to_us);
+    }
+
     /// The next window whose time has come, as a reading; its number and certificate are still to be filled in. Call
     /// again until there is none.
     pub fn close(&mut self, now_us: u64) -> Option<Reading> {
@@ -106,7 +113,10 @@ impl Acquisition {
         if now_us < self.windows[0].end_us + ARRIVAL_US {
             return None;
         }
-        let closed = self.windows[0];
+        let mut closed = self.windows[0];
+        if closed.start_us < self.pause_us.1 && closed.end_us > self.pause_us.0 {
+            closed.flags = closed.flags.with(ReadingFlags::LATE);
+        }
         self.windows[0] = self.windows[1];
         self.windows[1] = self.window_from(self.windows[0].end_us);
         Some(Reading {
@@ -186,5 +196,16 @@ mod tests {
         let readings = close_all(&mut acquisition, 403_000);
         assert_eq!(readings.len(), 40);
         assert!(readings.iter().all(|reading| reading.sense.count == 0));
+    }
+
+    #[test]
+    fn every_window_that_a_pause_touches_says_so() {
+        let mut acquisition = Acquisition::new(10_000_000);
+        close_all(&mut acquisition, 0);
+        close_all(&mut acquisition, 15_000);
+        acquisition.paused(15_000, 61_000);
+        let late: Vec<bool> =
+            close_all(&mut acquisition, 93_000).iter().map(|r| r.flags.contains(ReadingFlags::LATE)).collect();
+        assert_eq!(late, [true, true, true, true, true, true, false, false]);
     }
 }

@@ -17,6 +17,10 @@ const DIFFER_PPM: i64 = 2_500;
 const STEP_PPM: i64 = 2_500;
 /// Below this voltage the ratio says nothing, millivolts.
 const RATIO_FROM_MV: i64 = 300_000;
+/// The ratio is learned anew only while the voltage moves by less than this within the half second, ppm.
+const STEADY_PPM: i64 = 50_000;
+/// The two senses may follow a change by times that differ by this: their filters, and half a conversion each way.
+const LAG_US: i64 = 5_000;
 /// One sense is lost when the other is above this, millivolts.
 const LOST_FROM_MV: i64 = 100_000;
 /// Above this something is live, millivolts: 60 V dc, the usual touch limit (EN 61010-1, from memory).
@@ -29,6 +33,9 @@ const ARC_PER_MILLE: i64 = 150;
 struct Block {
     sense_mv: i64,
     cross_mv: i64,
+    /// Lowest and highest window of either sense.
+    low_mv: i64,
+    high_mv: i64,
 }
 
 /// Compares the senses.
@@ -37,8 +44,9 @@ pub struct Agreement {
     sums: Block,
     windows: i64,
     from_us: u64,
-    blocks: [Block; BLOCKS],
-    /// Blocks since the last doubt, up to `BLOCKS`.
+    /// The latest first, and one more than a mean needs: a change at the edge of the oldest shows against the one before.
+    blocks: [Block; BLOCKS + 1],
+    /// Blocks since the last doubt, up to all of them.
     held: usize,
     /// Running ratio of sense to cross-sense, ppm, and the blocks it rests on.
     ratio_ppm: Option<i64>,
@@ -84,7 +92,10 @@ impl Agreement {
         self.last_mv = Some(sense);
         if self.windows == 0 {
             self.from_us = window.time_us;
+            (self.sums.low_mv, self.sums.high_mv) = (sense, sense);
         }
+        self.sums.low_mv = self.sums.low_mv.min(sense).min(cross);
+        self.sums.high_mv = self.sums.high_mv.max(sense).max(cross);
         self.sums.sense_mv += sense;
         self.sums.cross_mv += cross;
         self.windows += 1;
@@ -101,22 +112,33 @@ impl Agreement {
     }
 
     fn close_block(&mut self, judge: &Judge<'_>) {
-        let block = Block { sense_mv: self.sums.sense_mv / self.windows, cross_mv: self.sums.cross_mv / self.windows };
+        let Block { sense_mv, cross_mv, .. } = self.sums;
+        let block = Block { sense_mv: sense_mv / self.windows, cross_mv: cross_mv / self.windows, ..self.sums };
         self.sums = Block::default();
         self.windows = 0;
         self.blocks.rotate_right(1);
         self.blocks[0] = block;
-        self.held = (self.held + 1).min(BLOCKS);
+        self.held = (self.held + 1).min(BLOCKS + 1);
         self.trips = TripSet::EMPTY;
         if let Some(trip) = lost(&block).or_else(|| self.disagrees(judge)).or_else(|| self.stepped(judge)) {
             self.trips.insert(trip);
         }
     }
 
+    /// What the senses may differ by in the mean over the last `count` blocks because the voltage moved meanwhile: the
+    /// change of the voltage, by the part that the lag is of this time, millivolts.
+    fn motion_mv(&self, count: usize) -> i64 {
+        let blocks = &self.blocks[..=count];
+        let low_mv = blocks.iter().map(|block| block.low_mv).min().unwrap_or(0);
+        let high_mv = blocks.iter().map(|block| block.high_mv).max().unwrap_or(0);
+        let moved_mv = high_mv - low_mv;
+        moved_mv * LAG_US / (count as i64 * BLOCK_US as i64)
+    }
+
     fn mean(&self, count: usize) -> Option<Block> {
-        let blocks = self.blocks.get(..count).filter(|_| self.held >= count)?;
+        let blocks = self.blocks.get(..count).filter(|_| self.held > count)?;
         let sum = |of: fn(&Block) -> i64| blocks.iter().map(of).sum::<i64>() / count as i64;
-        Some(Block { sense_mv: sum(|block| block.sense_mv), cross_mv: sum(|block| block.cross_mv) })
+        Some(Block { sense_mv: sum(|block| block.sense_mv), cross_mv: sum(|block| block.cross_mv), ..Block::default() })
     }
 
     fn disagrees(&self, judge: &Judge<'_>) -> Option<Trip> {
@@ -127,22 +149,32 @@ impl Agreement {
         // The root of the sum of squares lies between the larger and the sum: compared as squares, no root is needed.
         let differ = (second.sense_mv - second.cross_mv).abs();
         let four_u = 16 * (u_mv * u_mv + fixed_mv * fixed_mv);
-        (differ > size * DIFFER_PPM / 1_000_000 && differ * differ > four_u).then_some(Trip::SensesDisagree)
+        let allowed = differ - self.motion_mv(BLOCKS);
+        (allowed > size * DIFFER_PPM / 1_000_000 && allowed * allowed > four_u).then_some(Trip::SensesDisagree)
     }
 
     /// A step of the ratio; carries the running ratio on where there is none.
     fn stepped(&mut self, judge: &Judge<'_>) -> Option<Trip> {
         let half = self.mean(STEP_BLOCKS)?;
-        if half.sense_mv < RATIO_FROM_MV || half.cross_mv < RATIO_FROM_MV {
+        let high = |block: &Block| block.sense_mv >= RATIO_FROM_MV && block.cross_mv >= RATIO_FROM_MV;
+        if !self.blocks[..STEP_BLOCKS].iter().all(high) {
+            return None;
+        }
+        let motion_ppm = self.motion_mv(STEP_BLOCKS) * 1_000_000 / half.cross_mv;
+        let steady = motion_ppm * STEP_BLOCKS as i64 * BLOCK_US as i64 / LAG_US < STEADY_PPM;
+        if self.ratio_ppm.is_none() && !steady {
             return None;
         }
         let now_ppm = half.sense_mv * 1_000_000 / half.cross_mv;
         let running = self.ratio_ppm.unwrap_or(now_ppm);
         let off = now_ppm - running;
-        if off.abs() > STEP_PPM && judge.permit {
+        if off.abs() > STEP_PPM + motion_ppm && judge.permit {
             return Some(Trip::RatioChanged);
         }
-        // Follows within about a minute, since strings drift with temperature.
+        if !steady {
+            return None;
+        }
+        // Follows within about six seconds, since strings drift with temperature.
         self.ratio_ppm = Some(if off.abs() > STEP_PPM { now_ppm } else { running + off / 64 });
         None
     }
@@ -268,6 +300,27 @@ mod tests {
             (volts, volts)
         };
         assert_eq!(feed(&mut Agreement::default(), 5.0, bleed), None);
+    }
+
+    #[test]
+    fn switching_on_and_ramping_are_no_disagreement_though_one_filter_is_slower() {
+        // The cross-sense follows 3 ms later and loses most of a conversion at the step.
+        for seconds in [0.0, 0.01, 0.1, 0.5, 1.0, 3.0] {
+            let at = |t: f64| {
+                2_500.0 * if seconds == 0.0 { f64::from(t >= 3.004) } else { ((t - 3.004) / seconds).clamp(0.0, 1.0) }
+            };
+            let mean = |t: f64| (0..10).map(|part| at(t + f64::from(part) * 1e-3)).sum::<f64>() / 10.0;
+            let volts = |t: f64| (mean(t), mean(t - 3e-3));
+            assert_eq!(feed(&mut Agreement::default(), 10.0, volts), None, "ramp of {seconds} s");
+        }
+    }
+
+    #[test]
+    fn an_element_that_shorts_is_told_by_the_ratio_within_a_second() {
+        // One of ten elements: the main sense reads a ninth more.
+        let short = |t: f64| (2_500.0 * if t < 10.0 { 1.0 } else { 10.0 / 9.0 }, 2_500.0);
+        let (at, _) = feed(&mut Agreement::default(), 20.0, short).unwrap();
+        assert!((10.0..11.0).contains(&at), "{at}");
     }
 
     #[test]

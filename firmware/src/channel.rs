@@ -9,10 +9,11 @@ pub const SILENT_US: u64 = 5_200;
 const START_US: u64 = 50_000;
 /// Codes at or beyond this size stand at the end of the scale.
 pub const SCALE_END: i16 = 32_760;
-/// Equal codes in a row that are too many while the other sense moves.
-const FROZEN_RUN: u16 = 64;
-/// How far the other sense must move meanwhile, codes.
-const FROZEN_MOVE: u16 = 16;
+/// Equal codes in a row that are too many while the other sense moves. At a bench that is switched off the noise may be
+/// as small as 0.3 codes about a whole code; then one conversion in ten differs, and 128 equal ones come once in hours.
+const FROZEN_RUN: u16 = 128;
+/// How far the other sense must move meanwhile, codes: beyond eight standard deviations of noise of 2 codes.
+const FROZEN_MOVE: u16 = 24;
 /// Noise is judged over this many conversions, about a second.
 const NOISE_RUN: u32 = 860;
 
@@ -180,9 +181,9 @@ mod tests {
     #[test]
     fn equal_codes_are_frozen_only_while_the_other_moves() {
         let mut watch = ChannelWatch::new(0);
-        feed(&mut watch, (0..70).map(|index| (100, (index % 2) * 10)));
+        feed(&mut watch, (0..140).map(|index| (100, (index % 2) * 10)));
         assert!(!watch.is_frozen());
-        feed(&mut watch, (0..70).map(|index| (100, index)));
+        feed(&mut watch, (0..140).map(|index| (100, index)));
         assert!(watch.is_frozen());
         feed(&mut watch, [(101, 0)].into_iter());
         assert!(!watch.is_frozen());

@@ -7,6 +7,8 @@ use crate::io::Edge;
 
 /// A level must last this long to count, microseconds.
 pub const GLITCH_US: u64 = 200;
+/// A loop that has not been closed for [`GLITCH_US`] in a row within this time chatters, and counts as open, microseconds.
+pub const CHATTER_US: u64 = 2_000;
 
 /// One filtered line.
 #[derive(Clone, Copy, Debug)]
@@ -17,14 +19,19 @@ struct Filter {
     /// The level the pin has shown last, and since when.
     seen: bool,
     since_us: u64,
+    /// When the pin last showed the level that counts for long enough.
+    steady_us: u64,
 }
 
 impl Filter {
     const fn new(line: Line) -> Self {
-        Self { line, active: false, seen: false, since_us: 0 }
+        Self { line, active: false, seen: false, since_us: 0, steady_us: 0 }
     }
 
     fn see(&mut self, active: bool, time_us: u64) {
+        if self.seen == self.active && time_us.saturating_sub(self.since_us) >= GLITCH_US {
+            self.steady_us = time_us;
+        }
         if active != self.seen {
             self.seen = active;
             self.since_us = time_us;
@@ -34,9 +41,16 @@ impl Filter {
     /// The time of the change, if the new level has lasted long enough by `now_us`.
     fn settle(&mut self, now_us: u64) -> Option<u64> {
         let lasted = now_us.saturating_sub(self.since_us) >= GLITCH_US;
-        (self.seen != self.active && lasted).then(|| {
+        if self.seen != self.active && lasted {
             self.active = self.seen;
-            self.since_us
+            self.steady_us = now_us;
+            return Some(self.since_us);
+        }
+        let is_loop = matches!(self.line, Line::LoopA | Line::LoopB);
+        let chatters = is_loop && self.active && now_us.saturating_sub(self.steady_us) >= CHATTER_US;
+        chatters.then(|| {
+            self.active = false;
+            self.steady_us
         })
     }
 }
@@ -138,6 +152,39 @@ mod tests {
         let glitch = [edge(false, 1_600), edge(true, 1_700)];
         assert!(lines.update(2_000, &glitch, levels(true)).is_empty());
         assert!(lines.update(2_500, &[], levels(true)).is_empty());
+    }
+
+    #[test]
+    fn a_loop_that_chatters_counts_as_open_until_it_stays_closed() {
+        let mut lines = Lines::new();
+        lines.update(1_000, &[], levels(true));
+        lines.update(1_500, &[], levels(true));
+        let mut opened_us = None;
+        for now_us in (2_000..8_000).step_by(500) {
+            // Open for 100 us in every 250: never a level that lasts.
+            let edges = [
+                edge(false, now_us - 480),
+                edge(true, now_us - 380),
+                edge(false, now_us - 230),
+                edge(true, now_us - 130),
+            ];
+            if !lines.update(now_us, &edges, levels(true)).is_empty() {
+                opened_us.get_or_insert(now_us);
+            }
+        }
+        assert!(opened_us.is_some_and(|at_us| at_us <= 4_000), "{opened_us:?}");
+        assert!(!lines.contacts().loop_a_closed);
+        lines.update(8_500, &[], levels(true));
+        assert!(lines.contacts().loop_a_closed);
+    }
+
+    #[test]
+    fn a_glitch_just_before_the_end_of_a_pause_is_no_chatter() {
+        let mut lines = Lines::new();
+        lines.update(1_000, &[], levels(true));
+        lines.update(1_500, &[], levels(true));
+        assert!(lines.update(401_500, &[edge(false, 401_300), edge(true, 401_400)], levels(true)).is_empty());
+        assert!(lines.update(402_000, &[], levels(true)).is_empty());
     }
 
     #[test]

@@ -141,7 +141,10 @@ impl<J: BorrowMut<Journal>> Controller<J> {
     ///
     /// `now_us` is microseconds since power-up and never goes back.
     pub fn poll(&mut self, now_us: u64, inputs: &Inputs<'_>) -> Outputs {
-        let elapsed_us = now_us - self.last_poll_us.unwrap_or(now_us).min(now_us);
+        // A clock that went back would be a fault of the shell; here it only stands still.
+        let last_us = self.last_poll_us.unwrap_or(now_us);
+        let now_us = now_us.max(last_us);
+        let elapsed_us = now_us - last_us;
         self.last_poll_us = Some(now_us);
         self.note_lateness(now_us, elapsed_us);
         self.take_contacts(now_us, inputs);
@@ -196,7 +199,7 @@ impl<J: BorrowMut<Journal>> Controller<J> {
         if elapsed_us <= LATE_US {
             return;
         }
-        self.acquisition.mark(now_us, ReadingFlags::LATE);
+        self.acquisition.paused(now_us - elapsed_us, now_us);
         // What this processor slept through is not the converters' silence.
         self.sense.forgive(now_us);
         self.cross.forgive(now_us);
@@ -477,8 +480,8 @@ impl<J: BorrowMut<Journal>> Controller<J> {
     fn carry_out(&mut self, link: &mut Link, now_us: u64, message: ToDevice) {
         match message {
             ToDevice::Hello(hello) => self.greet(link, now_us, hello),
-            ToDevice::Ack(ack) if link.is_open() => self.journal.borrow_mut().acknowledge(&ack),
-            ToDevice::Rewind if link.is_open() => self.journal.borrow_mut().rewind(),
+            ToDevice::Ack(ack) => self.journal.borrow_mut().acknowledge(&ack),
+            ToDevice::Rewind => self.journal.borrow_mut().rewind(),
             ToDevice::Ask(request) => link.answer(match request {
                 Request::ReadCertificate => ToHost::Certificate(self.certificate),
                 Request::ReadSettings => ToHost::Settings(self.settings),
@@ -528,6 +531,8 @@ impl<J: BorrowMut<Journal>> Controller<J> {
         } else {
             match &request {
                 StoreRequest::Certificate(record) if record.device != self.boot.device => Some(Refusal::OtherDevice),
+                // All zero is how "no certificate" is told.
+                StoreRequest::Certificate(record) if record.hash == CertificateHash::NONE => Some(Refusal::OutOfRange),
                 StoreRequest::Settings(record) if record.fault().is_some() => Some(Refusal::OutOfRange),
                 _ => None,
             }
@@ -592,10 +597,7 @@ fn over_range(min: i16, max: i16) -> bool {
 }
 
 fn times(settings: &SettingsRecord) -> InterlockTimes {
-    InterlockTimes {
-        discrepancy_us: u32::from(settings.discrepancy_ms) * 1_000,
-        contactor_us: u32::from(settings.contactor_ms) * 1_000,
-    }
+    InterlockTimes::new(u32::from(settings.discrepancy_ms) * 1_000, u32::from(settings.contactor_ms) * 1_000)
 }
 
 const fn request_of(request: &StoreRequest) -> Request {

@@ -7,13 +7,14 @@
 //!
 //! | permit | loops | mirror contacts | button | what happens |
 //! | --- | --- | --- | --- | --- |
-//! | given | any open | any | any | withdrawn at once, *loop opened* latched |
+//! | given | both open | any | any | withdrawn at once, *loop opened* latched |
+//! | given | one open | any | any | withdrawn at once; *loop opened* latched when the other opens within the discrepancy time, else *loops disagree* |
 //! | given | both closed | released, longer than the contactor time | any | withdrawn, *contactor dropped* latched |
 //! | given | both closed | not released | any | stays, unless a cause is present |
-//! | withdrawn | one open, longer than the discrepancy time | any | any | *loops disagree* latched |
+//! | withdrawn | one open, longer than the discrepancy time | any | any | *loops disagree* latched, both loops to be tested again |
 //! | withdrawn | any | not released, longer than the contactor time | any | *contactor welded* latched and present |
 //! | withdrawn | any open | any | pressed | the press is void |
-//! | withdrawn | both closed, each seen open since the withdrawal | released | pressed, then released within 50 ms to 3 s | all trips cleared, given |
+//! | withdrawn | both closed, each seen open since the withdrawal and the last *loops disagree* | released | pressed, then released within 50 ms to 3 s | all trips cleared, given |
 //! | withdrawn | as above, and no certificate is the only cause | released | held 5 to 15 s, then released | given, uncalibrated |
 //! | any | any | any | held for 30 s | withdrawn, *button stuck* latched and present |
 
@@ -30,13 +31,33 @@ pub const LONG_MOST_US: u32 = 15_000_000;
 /// A button held this long is stuck.
 pub const STUCK_US: u32 = 30_000_000;
 
-/// The times that settings decide, microseconds.
+/// The times of the interlock, microseconds. Settings decide the first two; the others are the constants above, and are
+/// values here so that an exploration can visit every state with few ticks between one limit and the next.
 #[derive(Clone, Copy, Debug, PartialEq, Eq, Hash)]
 pub struct InterlockTimes {
     /// How long the loops may differ.
     pub discrepancy_us: u32,
     /// How long the contactors may take to follow.
     pub contactor_us: u32,
+    /// Shortest and longest press that counts.
+    pub press_us: (u32, u32),
+    /// Shortest and longest press that starts without a certificate.
+    pub long_us: (u32, u32),
+    /// A button held this long is stuck.
+    pub stuck_us: u32,
+}
+
+impl InterlockTimes {
+    /// With the times that settings decide.
+    pub const fn new(discrepancy_us: u32, contactor_us: u32) -> Self {
+        Self {
+            discrepancy_us,
+            contactor_us,
+            press_us: (PRESS_LEAST_US, PRESS_MOST_US),
+            long_us: (LONG_LEAST_US, LONG_MOST_US),
+            stuck_us: STUCK_US,
+        }
+    }
 }
 
 /// What one loop has shown since the permit was withdrawn.
@@ -82,6 +103,8 @@ pub struct Interlock {
     test_b: LoopTest,
     /// How long the loops have differed; stops at the discrepancy time.
     differ_us: u32,
+    /// How long ago one loop alone withdrew the permit, until it is known whether the other follows.
+    lone_us: Option<u32>,
     /// How long the contactors have not followed; stops at the contactor time.
     contactor_us: u32,
     /// How long the button is down; stops at the stuck time.
@@ -116,6 +139,7 @@ impl Interlock {
             test_a: LoopTest::Untested,
             test_b: LoopTest::Untested,
             differ_us: 0,
+            lone_us: None,
             contactor_us: 0,
             pressed_us: 0,
             held_us: 0,
@@ -194,11 +218,12 @@ impl Interlock {
         let run = |timer: u32, runs: bool, most: u32| if runs { timer.saturating_add(elapsed_us).min(most) } else { 0 };
         let differ = contacts.loop_a_closed != contacts.loop_b_closed;
         self.differ_us = run(self.differ_us, differ, self.times.discrepancy_us);
+        self.lone_us = self.lone_us.map(|lone_us| run(lone_us, true, self.times.discrepancy_us));
         let follows = contacts.contactors_released != self.is_given();
         self.contactor_us = run(self.contactor_us, !follows, self.times.contactor_us);
-        self.pressed_us = run(self.pressed_us, contacts.button_pressed, STUCK_US);
+        self.pressed_us = run(self.pressed_us, contacts.button_pressed, self.times.stuck_us);
         // Time until the release is seen belongs to the press.
-        self.held_us = run(self.held_us, self.phase == Phase::Pressed, LONG_MOST_US + 1);
+        self.held_us = run(self.held_us, self.phase == Phase::Pressed, self.times.long_us.1 + 1);
     }
 
     /// Loop tests and causes.
@@ -206,22 +231,51 @@ impl Interlock {
         self.test_a = self.test_a.see(contacts.loop_a_closed);
         self.test_b = self.test_b.see(contacts.loop_b_closed);
         let late = self.contactor_us >= self.times.contactor_us;
+        let (opened, lone) = self.judge_opening(contacts, was_given);
+        let differ = lone || self.differ_us >= self.times.discrepancy_us;
         let mut present = causes;
         let mut add_if = |yes: bool, trip: Trip| {
             if yes {
                 present.insert(trip);
             }
         };
-        add_if(was_given && !both_closed(contacts), Trip::LoopOpened);
-        add_if(self.differ_us >= self.times.discrepancy_us, Trip::LoopsDisagree);
+        add_if(opened, Trip::LoopOpened);
+        add_if(differ, Trip::LoopsDisagree);
         add_if(late && !was_given, Trip::ContactorWelded);
         add_if(late && was_given, Trip::ContactorDropped);
-        add_if(self.pressed_us >= STUCK_US, Trip::ButtonStuck);
+        add_if(self.pressed_us >= self.times.stuck_us, Trip::ButtonStuck);
         if self.is_uncalibrated() {
             present.remove(Trip::NoCertificate);
         }
+        // What the loops had shown before they disagreed proves nothing any more.
+        if differ && !self.present.contains(Trip::LoopsDisagree) {
+            self.restart_loop_test(contacts);
+        }
         self.present = present;
         self.latched.0 |= present.0;
+    }
+
+    /// Whether the loops opened together, and whether one opened alone. One open loop withdraws the permit at once; which
+    /// of the two it was is known when the other follows, or has had the discrepancy time to do so.
+    fn judge_opening(&mut self, contacts: Contacts, was_given: bool) -> (bool, bool) {
+        if was_given && !both_closed(contacts) {
+            self.restart_loop_test(contacts);
+            self.lone_us = Some(0);
+        }
+        let Some(lone_us) = self.lone_us else {
+            return (self.latched.contains(Trip::LoopOpened) && !both_closed(contacts), false);
+        };
+        let opened = self.test_a != LoopTest::Untested && self.test_b != LoopTest::Untested;
+        let lone = !opened && lone_us >= self.times.discrepancy_us;
+        if opened || lone {
+            self.lone_us = None;
+        }
+        (opened, lone)
+    }
+
+    fn restart_loop_test(&mut self, contacts: Contacts) {
+        self.test_a = LoopTest::Untested.see(contacts.loop_a_closed);
+        self.test_b = LoopTest::Untested.see(contacts.loop_b_closed);
     }
 
     /// The permit.
@@ -257,8 +311,8 @@ impl Interlock {
             return Changes::default();
         }
         let held = self.held_us;
-        let short = (PRESS_LEAST_US..=PRESS_MOST_US).contains(&held);
-        let long = (LONG_LEAST_US..=LONG_MOST_US).contains(&held);
+        let short = (self.times.press_us.0..=self.times.press_us.1).contains(&held);
+        let long = (self.times.long_us.0..=self.times.long_us.1).contains(&held);
         let calibrated = !self.present.contains(Trip::NoCertificate);
         if (short && calibrated) || (long && !calibrated) {
             let changes =
@@ -267,6 +321,7 @@ impl Interlock {
             self.present = TripSet::EMPTY;
             self.phase = Phase::Given { uncalibrated: !calibrated };
             self.contactor_us = 0;
+            self.lone_us = None;
             return changes;
         }
         self.phase = Phase::Withdrawn { armed: true };
@@ -282,8 +337,7 @@ impl Interlock {
 
     fn withdraw(&mut self, contacts: Contacts) {
         self.phase = Phase::Withdrawn { armed: false };
-        self.test_a = LoopTest::Untested.see(contacts.loop_a_closed);
-        self.test_b = LoopTest::Untested.see(contacts.loop_b_closed);
+        self.restart_loop_test(contacts);
         self.contactor_us = 0;
     }
 }

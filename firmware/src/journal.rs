@@ -5,7 +5,7 @@
 //! the clock, which is enough for entries younger than 71 minutes.
 
 use ringvolt_protocol::{
-    Ack, CertificateHash, Event, EventKind, Gap, Reading, ReadingFlags, Slow, Stream, Strobe, WindowCodes,
+    Ack, CertificateHash, Event, EventKind, Gap, Reading, ReadingFlags, Slow, Stream, Strobe, Trip, WindowCodes,
 };
 
 /// Readings kept: 76.8 s at 100 a second.
@@ -23,6 +23,9 @@ const FLAG_BITS: u16 = (1 << GENERATION_SHIFT) - 1;
 
 /// Low 24 bits of a packed word hold the sum, the upper eight the count.
 const SUM_BITS: u32 = 24;
+
+/// The kind of event whose bytes are all zero: the compiler keeps the tag of the others within this one's fields.
+const BLANK: EventKind = EventKind::Tripped { trip: Trip::LoopOpened, sense_mv: None, cross_mv: None };
 
 /// One converter's part of a packed reading.
 #[derive(Clone, Copy)]
@@ -72,12 +75,10 @@ struct PackedSlow {
     enclosure_centicelsius: Option<i16>,
 }
 
-/// A strobe edge as it is kept: low 31 bits of the time, and the level.
+/// A strobe edge as it is kept: the time's lower 63 bits above the level. Edges may be rare, and then wait for a host for
+/// hours, so that the low 32 bits would not do.
 #[derive(Clone, Copy)]
-struct PackedStrobe {
-    time_low: u32,
-    rising: bool,
-}
+struct PackedStrobe(u64);
 
 /// A ring of entries with running numbers.
 struct Ring<T, const N: usize> {
@@ -97,14 +98,16 @@ impl<T: Copy, const N: usize> Ring<T, N> {
         Self { entries: [empty; N], acked: 0, first: 0, next: 0, cursor: 0 }
     }
 
-    fn push(&mut self, entry: T) -> u32 {
+    fn push(&mut self, entry: T) {
+        // Numbers run out after 497 days of readings; a number dealt twice would be worse than an entry not kept.
+        if self.next == u32::MAX {
+            return;
+        }
         if self.next - self.first >= N as u32 {
             self.first += 1;
         }
-        let seq = self.next;
-        self.entries[seq as usize % N] = entry;
+        self.entries[self.next as usize % N] = entry;
         self.next += 1;
-        seq
     }
 
     /// The host has everything before `upto` on its disk. Numbers that were never given out, or were acknowledged
@@ -155,9 +158,9 @@ impl Journal {
     pub const fn new() -> Self {
         Self {
             readings: Ring::new(PackedReading::EMPTY),
-            events: Ring::new(Event { seq: 0, time_us: 0, kind: EventKind::PermitGiven }),
+            events: Ring::new(Event { seq: 0, time_us: 0, kind: BLANK }),
             slow: Ring::new(PackedSlow { time_us: 0, beam_na: None, enclosure_centicelsius: None }),
-            strobes: Ring::new(PackedStrobe { time_low: 0, rising: false }),
+            strobes: Ring::new(PackedStrobe(0)),
             certificates: [CertificateHash::NONE; 4],
             generation: 0,
         }
@@ -204,7 +207,7 @@ impl Journal {
 
     /// Keeps a strobe edge.
     pub fn strobe(&mut self, time_us: u64, rising: bool) {
-        self.strobes.push(PackedStrobe { time_low: time_us as u32, rising });
+        self.strobes.push(PackedStrobe(time_us << 1 | u64::from(rising)));
     }
 
     /// Lets go of what the host has on its disk.
@@ -261,10 +264,10 @@ impl Journal {
     }
 
     /// The next strobe edge to send; it counts as sent.
-    pub fn take_strobe(&mut self, now_us: u64) -> Option<Strobe> {
+    pub fn take_strobe(&mut self) -> Option<Strobe> {
         let (seq, strobe) = self.strobes.waiting()?;
         self.strobes.cursor += 1;
-        Some(Strobe { seq, time_us: widen(strobe.time_low, now_us), rising: strobe.rising })
+        Some(Strobe { seq, time_us: strobe.0 >> 1, rising: strobe.0 & 1 == 1 })
     }
 
     /// The next slow inputs to send; they count as sent.
@@ -293,7 +296,7 @@ impl Journal {
 
 /// The time not after `now_us` whose low 32 bits these are.
 const fn widen(time_low: u32, now_us: u64) -> u64 {
-    now_us - (now_us as u32).wrapping_sub(time_low) as u64
+    now_us.wrapping_sub((now_us as u32).wrapping_sub(time_low) as u64)
 }
 
 #[cfg(test)]

@@ -7,6 +7,7 @@
 //! | module | subject |
 //! | --- | --- |
 //! | [`io`] | what goes in and what comes out |
+//! | [`store`] | records in flash that survive a power cut at any instant |
 //! | [`controller`] | `poll`: owns the parts below and passes values between them |
 //! | [`contacts`] | input lines after the glitch filter |
 //! | [`interlock`] | loops, contactors, reset button, permit, latched trips |
@@ -33,6 +34,7 @@ pub mod interlock;
 pub mod io;
 pub mod journal;
 pub mod link;
+pub mod store;
 
 pub use controller::Controller;
 pub use journal::Journal;

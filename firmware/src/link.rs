@@ -51,10 +51,11 @@ impl Link {
             let Some(message) = self.decoder.push::<ToDevice>(*byte) else { continue };
             if let ToDevice::Hello(hello) = message {
                 self.greet(hello);
+            } else if !self.open {
+                // Nobody of our version has said hello: nothing is answered, nothing is done.
+                continue;
             }
-            if self.open {
-                self.heard_us = Some(now_us);
-            }
+            self.heard_us = self.open.then_some(now_us);
             match message {
                 ToDevice::Echo { token } => {
                     self.answer(ToHost::EchoReply(EchoReply { token, received_us: now_us, sent_us: now_us }))
@@ -87,11 +88,6 @@ impl Link {
     /// Whether the host has been heard within the grace time.
     pub fn is_heard(&self, now_us: u64, grace_us: u64) -> bool {
         self.open && self.heard_us.is_some_and(|heard_us| now_us.saturating_sub(heard_us) <= grace_us)
-    }
-
-    /// Whether the host was heard in this very poll or since `since_us`.
-    pub fn heard_since(&self, since_us: u64) -> bool {
-        self.heard_us.is_some_and(|heard_us| heard_us >= since_us)
     }
 
     /// Puts an answer on its way; one too many is dropped, and the host asks again.
@@ -166,7 +162,7 @@ fn next_entry(journal: &mut Journal, now_us: u64) -> Option<ToHost> {
     if let Some(event) = journal.take_event() {
         return Some(ToHost::Event(event));
     }
-    if let Some(strobe) = journal.take_strobe(now_us) {
+    if let Some(strobe) = journal.take_strobe() {
         return Some(ToHost::Strobe(strobe));
     }
     if let Some(slow) = journal.take_slow() {

@@ -26,7 +26,7 @@ pub const TRIPS: [TripRow; 23] = [
     TripRow {
         trip: Trip::LoopOpened,
         code: "loop-opened",
-        detection: "a loop reads open for 200 us while the permit is given",
+        detection: "both loops open within the discrepancy time of each other while the permit is given (200 us each; the first withdraws it)",
         latency_us: 1_000,
         sentence: "A door, cover or stop opened: close it, then press and release Reset.",
         clearing: "both loops closed again",
@@ -35,7 +35,7 @@ pub const TRIPS: [TripRow; 23] = [
     TripRow {
         trip: Trip::LoopsDisagree,
         code: "loops-disagree",
-        detection: "one loop is open and the other closed for longer than the discrepancy time",
+        detection: "one loop opens while the permit is given (200 us, which withdraws it) and the other does not follow, or the loops differ, for the discrepancy time",
         latency_us: 1_000,
         sentence: "Loops A and B disagree: one contact or wire is faulty; have it serviced.",
         clearing: "both loops seen open and closed again",
@@ -89,7 +89,7 @@ pub const TRIPS: [TripRow; 23] = [
     TripRow {
         trip: Trip::SenseFrozen,
         code: "sense-frozen",
-        detection: "64 equal codes while the other sense moves by 16 codes, or less noise over a second than the floor",
+        detection: "128 equal codes while the other sense moves by 24 codes, or less noise over a second than the floor",
         latency_us: 2_100_000,
         sentence: "The main reading is frozen: treat as live.",
         clearing: "the code moves again",
@@ -98,7 +98,7 @@ pub const TRIPS: [TripRow; 23] = [
     TripRow {
         trip: Trip::CrossFrozen,
         code: "cross-frozen",
-        detection: "64 equal codes while the other sense moves by 16 codes, or less noise over a second than the floor",
+        detection: "128 equal codes while the other sense moves by 24 codes, or less noise over a second than the floor",
         latency_us: 2_100_000,
         sentence: "The second reading is frozen: treat as live.",
         clearing: "the code moves again",

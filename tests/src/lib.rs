@@ -1,5 +1,7 @@
 //! Helpers for checks that run the whole program.
 
+pub mod virtual_bench;
+
 use std::{
     collections::HashMap,
     fs,
@@ -136,3 +138,5 @@ pub fn table(path: &Path) -> Vec<HashMap<String, String>> {
     let mut reader = csv::Reader::from_reader(text.as_bytes());
     reader.deserialize().map(|row| row.expect("the table is well formed")).collect()
 }
+
+pub mod run_file;

@@ -74,15 +74,14 @@ impl Check {
         self.sense_volts - self.reference_volts
     }
 
-    /// The same in parts per million of the reference.
-    pub fn deviation_ppm(&self) -> f64 {
-        1e6 * self.deviation_volts() / self.reference_volts
+    /// The same in parts per million of the reference; `None` for a check at zero.
+    pub fn deviation_ppm(&self) -> Option<f64> {
+        (self.reference_volts != 0.0).then(|| 1e6 * self.deviation_volts() / self.reference_volts)
     }
 
     fn sound(&self) -> bool {
         let numbers = [self.reference_volts, self.sense_volts, self.cross_volts, self.u_volts, self.difference_u_volts];
         numbers.iter().all(|value| value.abs() <= 50_000.0)
-            && self.reference_volts.abs() >= 1.0
             && self.u_volts > 0.0
             && self.time_utc.parse::<Timestamp>().is_ok()
     }
@@ -178,12 +177,9 @@ pub fn judge(checks: &[Check], certificate: &Certificate) -> Vec<Finding> {
 
 fn deviation(last: &Check) -> Finding {
     let (volts, u) = (last.deviation_volts(), last.u_volts);
-    let text = format!(
-        "At {:.1} V the main sense is off by {volts:+.2} V ({:+.0} ppm), {:.1} u",
-        last.reference_volts,
-        last.deviation_ppm(),
-        volts.abs() / u
-    );
+    let ppm = last.deviation_ppm().map_or_else(String::new, |ppm| format!(" ({ppm:+.0} ppm)"));
+    let place = last.reference_volts;
+    let text = format!("At {place:.1} V the main sense is off by {volts:+.2} V{ppm}, {:.1} u", volts.abs() / u);
     if volts.abs() <= 2.0 * u {
         finding(Severity::Pass, "check", format!("{text}: as the certificate says."))
     } else if volts.abs() <= 3.0 * u {
@@ -220,11 +216,11 @@ fn one_sided(current: &[&Check]) -> Option<Finding> {
 /// A straight line through relative deviations over time.
 fn trend(current: &[&Check], certificate: &Certificate) -> Option<Finding> {
     let first = current.first()?.years();
-    let years: Vec<f64> = current.iter().map(|check| check.years() - first).collect();
-    if current.len() < 4 || years.last()? * 365.25 < 30.0 {
+    let relative = current.iter().filter_map(|check| Some((check.years() - first, check.deviation_ppm()?)));
+    let (years, ppm): (Vec<f64>, Vec<f64>) = relative.unzip();
+    if years.len() < 4 || (years.last()? - years.first()?) * 365.25 < 30.0 {
         return None;
     }
-    let ppm: Vec<f64> = current.iter().map(|check| check.deviation_ppm()).collect();
     let line = solve(&[vec![1.0; ppm.len()], years.clone()], &ppm, &vec![1.0; ppm.len()])?;
     let (slope, u) = (line.coefficients[1], libm::sqrt(line.cofactors[1][1] * line.unit_variance()));
     let allowed = 2.0 * certificate.stability.drift_u_ppm_per_year;
@@ -285,6 +281,18 @@ mod tests {
         assert_eq!(worst(&monthly(2, |_| 1000.0), "check"), Some(Severity::Fail));
         assert_eq!(worst(&monthly(9, |_| 80.0), "run"), Some(Severity::Doubt));
         assert_eq!(worst(&monthly(2, |_| 1000.0), "senses"), Some(Severity::Fail));
+    }
+
+    #[test]
+    fn a_check_at_zero_is_judged_in_volts_and_is_no_part_of_the_trend() {
+        let certificate = example();
+        let at_zero = |volts: f64| {
+            let codes = (certificate.sense.code(volts), certificate.cross.code(0.0));
+            Check::new(&certificate, certificate.issued_day() * DAY_NS, 0.0, codes, Some(23.0))
+        };
+        assert_eq!(worst(&[at_zero(0.1)], "check"), Some(Severity::Pass));
+        assert_eq!(worst(&[at_zero(3.0)], "check"), Some(Severity::Fail));
+        assert_eq!(worst(&[at_zero(0.1), at_zero(0.0), at_zero(0.1), at_zero(0.2)], "drift"), None);
     }
 
     #[test]

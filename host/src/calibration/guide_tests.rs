@@ -215,7 +215,7 @@ fn slips_at_the_keyboard_are_answered_and_do_not_enter_the_journal() {
     let world = World::new(1, Flaws::default());
     let (_folder, mut session) = session(4, 1);
     // Zero; then at 1375 V: nonsense, thousands, kilovolts, help, and the truth.
-    let slips = ["0.0", "about a thousand", "1,375", "1.375", "?", "s", "", "1375"];
+    let slips = ["0.0", "about a thousand", "1,375", "1.375", "1.375", "?", "s", "", "1.375 kV"];
     let mut person = Person::new(&world, &slips);
     assert_eq!(guided(&mut session, &world, &mut person).unwrap(), End::Complete);
     assert_eq!(session.points().len(), 9);
@@ -223,7 +223,7 @@ fn slips_at_the_keyboard_are_answered_and_do_not_enter_the_journal() {
     for words in [
         "is no number of volts",
         "thousands or a fraction",
-        "typed in kilovolts?",
+        "that is in kilovolts",
         "Type what the reference shows",
         "Say why",
     ] {

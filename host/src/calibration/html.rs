@@ -9,7 +9,7 @@ h1{font-size:1.5rem}h2{font-size:1.1rem;margin-top:1.6rem}\
 table{border-collapse:collapse;margin:.5rem 0;font-variant-numeric:tabular-nums}\
 th,td{border:1px solid #777;padding:.15rem .5rem;text-align:right}th[scope=row],td.text{text-align:left}\
 .mark{border:3px solid #111;padding:.4rem .8rem;font-weight:700}\
-svg{max-width:100%;height:auto}code{overflow-wrap:anywhere}\
+figure{margin:.5rem 0}.points{font-size:.8rem}.points td:nth-child(2){white-space:nowrap}svg{max-width:100%;height:auto}code{overflow-wrap:anywhere}\
 @media print{body{margin:0;max-width:none;font-size:11px}h2{break-after:avoid}tr{break-inside:avoid}}";
 
 /// The page.
@@ -135,7 +135,11 @@ fn picture(page: &mut String, certificate: &Certificate, channel: Channel) {
             certificate.points.len(),
             largest(report)
         );
-        let _ = writeln!(page, "<figure role=\"img\" aria-label=\"{alt}\">{svg}</figure>");
+        let _ = writeln!(
+            page,
+            "<figure role=\"img\" aria-label=\"{alt}\">{svg}<figcaption>{}</figcaption></figure>",
+            plot::LEGEND
+        );
     }
 }
 
@@ -151,7 +155,7 @@ fn uncertainty(page: &mut String, certificate: &Certificate) {
     } else {
         conditions.volts_min
     };
-    page.push_str("<h2>Uncertainty in use</h2>\n<p>Common to all frames, on the last day of validity, at the calibration's temperature; expanded, k = 2.</p>\n<table>\n<tr><th scope=\"col\">Volts</th>");
+    page.push_str("<h2>Uncertainty in use</h2>\n<p>Common to all frames, on the last day of validity, at the calibration's temperature. The parts are standard uncertainties (k = 1), U is expanded (k = 2).</p>\n<table>\n<tr><th scope=\"col\">Volts</th>");
     let parts_at = |share: f64| {
         let volts = share * largest;
         let code = certificate.sense.code(volts);
@@ -173,7 +177,7 @@ fn uncertainty(page: &mut String, certificate: &Certificate) {
 }
 
 fn points(page: &mut String, certificate: &Certificate) {
-    page.push_str("<h2>Points</h2>\n<table>\n<tr>");
+    page.push_str("<h2>Points</h2>\n<p>Off: main sense under this certificate less reference.</p>\n<table class=\"points\">\n<tr>");
     for head in [
         "No.",
         "Time, UTC",
@@ -182,7 +186,7 @@ fn points(page: &mut String, certificate: &Certificate) {
         "Main sense, code",
         "Cross-sense, code",
         "Enclosure, &deg;C",
-        "Main sense less reference, V",
+        "Off, V",
         "Remark",
     ] {
         let _ = write!(page, "<th scope=\"col\">{head}</th>");

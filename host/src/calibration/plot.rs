@@ -5,9 +5,9 @@ use std::fmt::Write as _;
 use plotters::{
     prelude::{
         ChartBuilder, Circle, Cross, DrawingAreaErrorKind, EmptyElement, IntoDrawingArea, LineSeries, PathElement,
-        SVGBackend, Text, TriangleMarker,
+        SVGBackend, TriangleMarker,
     },
-    style::{BLACK, Color, IntoFont, WHITE},
+    style::{BLACK, Color, WHITE},
 };
 
 use super::{FitReport, Point};
@@ -57,6 +57,9 @@ pub fn residual_lines(points: &[Point], report: &FitReport) -> String {
     text
 }
 
+/// What the marks of [`residual_svg`] mean.
+pub(super) const LEGEND: &str = "Filled triangle: taken upwards; circle: downwards; square: zero; cross: not used.";
+
 /// The residuals over voltage as an SVG picture; an empty string where there is nothing to draw.
 pub(super) fn residual_svg(points: &[Point], report: &FitReport, title: &str) -> String {
     let mut svg = String::new();
@@ -101,7 +104,5 @@ fn draw(svg: &mut String, points: &[Point], report: &FitReport, title: &str) -> 
             _ => chart.draw_series([Cross::new(at, 5, BLACK.stroke_width(2))])?,
         };
     }
-    let legend = "triangle: up   circle: down   square: zero   cross: not used";
-    area.draw(&Text::new(legend, (230, 284), ("sans-serif", 11).into_font()))?;
     area.present()
 }

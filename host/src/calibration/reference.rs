@@ -89,9 +89,14 @@ impl ReferenceSource for Typed {
                 _ if line.starts_with("s ") => return Ok(Answer::Skip(line[2..].trim().to_owned())),
                 _ => match parse_typed_volts(line) {
                     Err(problem) => talk.say(&format!("  \"{}\" {problem}.", line.escape_debug())),
-                    Ok(volts) if plausible(volts, expected_volts) || doubted == Some(volts) => {
-                        return Ok(Answer::Volts(volts));
+                    Ok(volts) if plausible(volts, expected_volts) => return Ok(Answer::Volts(volts)),
+                    Ok(volts) if plausible(1e3 * volts, expected_volts) => {
+                        talk.say(&format!(
+                            "  {volts} V, but the divider shows about {expected_volts:.0} V: that is in kilovolts. Type volts, or \
+                             \"{volts} kV\"."
+                        ));
                     }
+                    Ok(volts) if doubted == Some(volts) => return Ok(Answer::Volts(volts)),
                     Ok(volts) => {
                         doubted = Some(volts);
                         let why = ended(guess(volts, expected_volts));

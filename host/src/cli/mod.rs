@@ -19,6 +19,7 @@ mod report;
 mod run;
 mod simulate;
 mod stamp;
+mod verify;
 
 pub use failure::Failure;
 
@@ -54,6 +55,8 @@ pub enum Command {
     Divider(divider::Args),
     /// Wavelength and rings this tube would show at given voltages.
     Predict(predict::Args),
+    /// Check a run file and say what may still be trusted.
+    Verify(verify::Args),
 }
 
 /// Parses the command line, carries it out and gives the exit code: 0 done, 1 failed with a stated reason, 2 wrong usage.
@@ -80,5 +83,6 @@ fn dispatch(command: &Command) -> Result<(), Failure> {
         Command::Calibrate(args) => calibrate::run(args),
         Command::Divider(args) => divider::run(args),
         Command::Predict(args) => predict::run(args),
+        Command::Verify(args) => verify::run(args),
     }
 }

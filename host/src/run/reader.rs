@@ -90,11 +90,11 @@ impl RunReader {
         &self.path
     }
 
-    fn read<T>(&self, work: impl FnOnce(&Connection) -> rusqlite::Result<T>) -> Result<T, RunError> {
+    pub(super) fn read<T>(&self, work: impl FnOnce(&Connection) -> rusqlite::Result<T>) -> Result<T, RunError> {
         work(&self.connection).map_err(|error| RunError::reading(&self.path, &error))
     }
 
-    fn rows<T>(
+    pub(super) fn rows<T>(
         &self,
         sql: &str,
         values: impl rusqlite::Params,

@@ -96,21 +96,29 @@ impl Stamper {
         let (start_ns, end_ns) = (exposure.start_utc_ns, exposure.end_utc_ns);
         let mut reasons = Reasons::default();
         reasons.add_if(evidence.restarted, Reason::ControllerRestarted);
-        let during = evidence.series.within(start_ns, end_ns);
-        let around = evidence.series.within(self.from_ns(exposure), self.until_ns(exposure));
-        let Some(mean) = exposure_mean(around, start_ns, end_ns) else {
-            reasons.add(Reason::TooFewReadings);
-            self.judge_interlock(&mut reasons, exposure, evidence, during);
-            return row(frame, &reasons, None);
-        };
-        let steady =
-            steadiness(around, start_ns, end_ns, self.settle_ns(), mean.volts, self.profile.controller.mains_hz);
-        let code = mean_code(during);
         let timing_u_ns = libm::hypot(
             libm::hypot(clock_u_ns as f64, exposure.start_u_ns as f64),
             self.profile.divider.filter_u_seconds / NS,
         );
-        self.judge_interlock(&mut reasons, exposure, evidence, during);
+        // What happens beside the exposure may as well have happened within it, as far as its time is uncertain.
+        let guard_ns = (3.0 * timing_u_ns).round() as i64;
+        let during = evidence.series.within(start_ns, end_ns);
+        let around = evidence.series.within(self.from_ns(exposure), self.until_ns(exposure));
+        let Some(mean) = exposure_mean(around, start_ns, end_ns) else {
+            reasons.add(Reason::TooFewReadings);
+            self.judge_interlock(&mut reasons, exposure, guard_ns, evidence, during);
+            return row(frame, &reasons, None);
+        };
+        let steady = steadiness(
+            around,
+            start_ns - guard_ns,
+            end_ns + guard_ns,
+            self.settle_ns(),
+            mean.volts,
+            self.profile.controller.mains_hz,
+        );
+        let code = mean_code(during);
+        self.judge_interlock(&mut reasons, exposure, guard_ns, evidence, during);
         self.judge_cover(&mut reasons, exposure, &mean, around);
         judge_flags(&mut reasons, during);
         self.judge_motion(&mut reasons, &mean, &steady);
@@ -128,9 +136,16 @@ impl Stamper {
         row(frame, &reasons, value)
     }
 
-    fn judge_interlock(&self, reasons: &mut Reasons, exposure: &Exposure, evidence: &Evidence<'_>, during: &[Sample]) {
-        let from = exposure.start_utc_ns - self.settle_ns() - exposure.start_u_ns;
-        let until = exposure.end_utc_ns + exposure.start_u_ns;
+    fn judge_interlock(
+        &self,
+        reasons: &mut Reasons,
+        exposure: &Exposure,
+        guard_ns: i64,
+        evidence: &Evidence<'_>,
+        during: &[Sample],
+    ) {
+        let from = exposure.start_utc_ns - self.settle_ns() - guard_ns;
+        let until = exposure.end_utc_ns + guard_ns;
         let changed = evidence.interlock_ns.iter().any(|time| (from..=until).contains(time));
         let open = during.iter().any(|sample| sample.flags.contains(ReadingFlags::LOOP_OPEN));
         reasons.add_if(changed || open, Reason::InterlockChanged);

@@ -31,9 +31,11 @@ pub(super) fn run(args: &CheckArgs) -> Result<(), Failure> {
     let volts = parse_typed_volts(&args.reference_volts).map_err(|problem| {
         Failure::Usage(format!("--reference-volts \"{}\" {problem}", args.reference_volts.escape_debug()))
     })?;
-    if volts.abs() < 0.1 * certificate.conditions.volts_max.abs().max(certificate.conditions.volts_min.abs()) {
+    if volts != 0.0
+        && volts.abs() < 0.1 * certificate.conditions.volts_max.abs().max(certificate.conditions.volts_min.abs())
+    {
         let sentence = format!(
-            "{volts} V is too little for a check: choose a voltage you use, above a tenth of the calibrated range"
+            "{volts} V is too little for a check: choose 0 (high voltage off) or a voltage you use, above a tenth of the calibrated range"
         );
         return Err(Failure::Usage(sentence));
     }

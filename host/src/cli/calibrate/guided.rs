@@ -107,8 +107,12 @@ pub(super) struct ResumeArgs {
     issue: IssueArgs,
 }
 
-const CAUTION: &str = "High voltage can kill. Work with a second person, one hand in the pocket, the enclosure closed; change \
-leads only with the supply off and everything earthed. 0 V on a screen is no proof of dead.";
+const CAUTION: &str = "\
+High voltage can kill. Work with a second person, one hand in the pocket, the
+enclosure closed; change leads only with the supply off and everything earthed.
+0 V on a screen is no proof of dead.
+Warm everything up for 30 minutes first. Keep the reference on the tube's own
+pin, not on the supply's terminal.";
 
 pub(super) fn run(args: &RunArgs) -> Result<(), Failure> {
     let profile = bench::load(&args.bench)?;
