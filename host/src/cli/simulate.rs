@@ -20,19 +20,16 @@ use crate::{
 
 /// Run an invented bench behind a pseudo-terminal: controller, supply, tube and camera, all SIMULATED.
 ///
-/// A script is a TOML file of `[[happening]]` tables with `at_seconds`, `do` and what belongs to it. Kinds of happening:
-/// set-volts {volts}, ramp {volts, volts_per_second}, sag {fraction, seconds}, jump {fraction}, arc, open-door,
-/// close-door, open-loop-a, close-loop-a, open-loop-b, close-loop-b, press-button, release-button, weld-contactor,
-/// free-contactor, string-factor {which, factor}, over-range {which}, silent {which}, frozen {which}, mend {which},
-/// start-camera, stop-camera, celsius {celsius}; `which` is "sense" or "cross".
+/// A script is a TOML file of `[[happening]]` tables with `at_seconds`, `do` and what belongs to it; `--explain` lists
+/// what can happen. The world is fixed by the seed; the timing of the pseudo-terminal is not.
 #[derive(Debug, ClapArgs)]
 pub struct Args {
     /// Where to link the pseudo-terminal that `ringvolt run --link` opens.
-    #[arg(long, value_name = "FILE")]
-    pub link_path: PathBuf,
+    #[arg(long, value_name = "FILE", required_unless_present = "explain")]
+    pub link_path: Option<PathBuf>,
     /// The folder the simulated camera writes to.
-    #[arg(long, value_name = "DIR")]
-    pub frames: PathBuf,
+    #[arg(long, value_name = "DIR", required_unless_present = "explain")]
+    pub frames: Option<PathBuf>,
     /// What happens, instead of the usual demonstration.
     #[arg(long, value_name = "FILE")]
     pub script: Option<PathBuf>,
@@ -48,6 +45,9 @@ pub struct Args {
     /// End after this many seconds; the usual demonstration is spread over them.
     #[arg(long, value_name = "SECONDS")]
     pub seconds: Option<f64>,
+    /// List what can happen in a script, and end.
+    #[arg(long)]
+    pub explain: bool,
 }
 
 /// Length of the demonstration without `--seconds`.
@@ -55,6 +55,11 @@ const USUAL_SECONDS: f64 = 60.0;
 
 /// Runs until it is stopped.
 pub fn run(args: &Args) -> Result<(), Failure> {
+    // Without both, the command line was not accepted unless it asked for this.
+    let (false, Some(link), Some(frames)) = (args.explain, &args.link_path, &args.frames) else {
+        print!("{}", simulation::explain());
+        return Ok(());
+    };
     let seconds = checked_seconds(args.seconds)?;
     let scenario = match &args.script {
         Some(path) => Scenario::load(path).map_err(Failure::usage)?,
@@ -73,12 +78,12 @@ pub fn run(args: &Args) -> Result<(), Failure> {
         }
         None => built_in()?,
     };
-    let beside = || args.frames.parent().unwrap_or(Path::new(".")).join("truth.csv");
+    let beside = || frames.parent().unwrap_or(Path::new(".")).join("truth.csv");
     let bench = Bench {
         setup: simulation::setup(&profile, &certificate, scenario, args.seed).map_err(Failure::job)?,
         optics: simulation::optics(&profile, args.seed).map_err(Failure::job)?,
-        link: args.link_path.clone(),
-        frames: args.frames.clone(),
+        link: link.clone(),
+        frames: frames.clone(),
         truth: args.truth.clone().unwrap_or_else(beside),
     };
     let stop = stop_flag()?;

@@ -81,10 +81,7 @@ fn supply(profile: &Profile, seed: u64) -> SupplySetup {
     }
 }
 
-/// The built-in bench.
-///
-/// # Panics
-/// Never: that profile and certificate make a bench is checked by a test.
+/// The built-in bench, for tests.
 #[cfg(test)]
 pub(crate) fn example_setup(scenario: Scenario, seed: u64) -> Setup {
     let profile = Profile::parse(&crate::profile::example(), "the built-in bench").unwrap();
@@ -122,10 +119,10 @@ pub fn optics(profile: &Profile, seed: u64) -> Result<Optics, SetupError> {
         height: 480,
         axis: (319.5 + within(&mut rng, 10.0), 239.5 + within(&mut rng, 8.0)),
         field_tesla: (field_tesla * libm::cos(field_angle), field_tesla * libm::sin(field_angle)),
-        spot_metres: 0.28e-3,
-        crystal_metres: 12e-9,
+        spot_metres: 0.34e-3,
+        crystal_metres: 7e-9,
         six_fold: None,
-        ring_grey: 85.0,
+        ring_grey: 66.0,
         stray_grey: 12.0,
         noise_grey: 1.3,
         dead_patches: Vec::new(),

@@ -112,6 +112,7 @@ mod tests {
         certificate.stability.drift_u_ppm_per_year = 0.0;
         certificate.stability.temperature_u_ppm_per_kelvin = 0.0;
         certificate.sense.covariance = [[0.0; 3]; 3];
+        certificate.sense.hysteresis_fraction = 0.0;
         certificate.sense.coefficients[2] = 2e-9;
         let [main, _] = draw(&setup);
         let certificate = &setup.certificate;

@@ -57,7 +57,7 @@ impl DeviceClock {
 
     /// How fast it runs against true time, ppm.
     #[cfg(test)]
-    pub fn rate_ppm(&self) -> f64 {
+    fn rate_ppm(&self) -> f64 {
         (self.us_per_ns * 1e3 - 1.0) * 1e6
     }
 }
