@@ -12,6 +12,9 @@ use super::{
 /// Codes this near the end of a 16-bit converter are no measurement.
 const LAST_CODE: f64 = 32_700.0;
 
+/// After so long without codes the person is asked what to do.
+const LONGEST_QUIET_SECONDS: u32 = 10;
+
 /// How the guide speaks with a person.
 pub trait Talk {
     /// A line that stays.
@@ -166,7 +169,9 @@ impl Guide<'_> {
         }
     }
 
-    fn watched(&self) -> Watched {
+    /// Begins to watch anew. What was sent while a person was reading or setting is not part of it.
+    fn watched(&mut self) -> Watched {
+        while let Ok(CodeEvent::Codes(_)) = self.source.next(Duration::ZERO) {}
         Watched {
             watch: SettlingWatch::new(self.rules),
             recent: VecDeque::new(),
@@ -195,10 +200,11 @@ impl Guide<'_> {
     }
 
     fn wait(&mut self, step: &Step, watched: &mut Watched) -> Result<Waited, GuideError> {
-        let mut judged_second = 0;
+        let (mut judged_second, mut quiet_seconds) = (0, 0);
         loop {
             match self.source.next(Duration::from_secs(1)) {
                 Ok(CodeEvent::Codes(codes)) => {
+                    quiet_seconds = 0;
                     watched.push(codes);
                     // Once a second is often enough to judge.
                     let second = codes.utc_ns / 1_000_000_000;
@@ -207,8 +213,17 @@ impl Guide<'_> {
                     }
                     judged_second = second;
                 }
-                Ok(CodeEvent::Quiet) => {
+                Ok(CodeEvent::Quiet) if quiet_seconds < LONGEST_QUIET_SECONDS => {
+                    quiet_seconds += 1;
                     self.talk.progress("No codes from the controller: do not assume 0 V.");
+                    continue;
+                }
+                Ok(CodeEvent::Quiet) => {
+                    quiet_seconds = 0;
+                    if self.trouble("No codes came for ten seconds: do not assume 0 V.")? {
+                        return Ok(Waited::Stop);
+                    }
+                    *watched = self.watched();
                     continue;
                 }
                 Ok(CodeEvent::Ended) => {
@@ -216,8 +231,7 @@ impl Guide<'_> {
                     return Err(SourceError::Link(problem).into());
                 }
                 Err(error) => {
-                    self.talk.say(&format!("  {error}"));
-                    if self.talk.ask("Enter tries again, q stops (nothing is lost): ")?.trim() == "q" {
+                    if self.trouble(&error.to_string())? {
                         return Ok(Waited::Stop);
                     }
                     *watched = self.watched();
@@ -228,6 +242,12 @@ impl Guide<'_> {
                 return Ok(end);
             }
         }
+    }
+
+    /// Tells what is wrong with the codes; whether the person stops.
+    fn trouble(&mut self, problem: &str) -> Result<bool, GuideError> {
+        self.talk.say(&format!("  {problem}"));
+        Ok(self.talk.ask("Enter waits on, q stops (nothing is lost): ")?.trim() == "q")
     }
 
     /// What the last second means: the end of the wait, or `None` to wait on.

@@ -108,6 +108,23 @@ impl World {
     }
 }
 
+/// A controller that has gone quiet.
+struct Mute;
+
+impl CodeSource for Mute {
+    fn next(&mut self, _limit: Duration) -> Result<CodeEvent, SourceError> {
+        Ok(CodeEvent::Quiet)
+    }
+
+    fn device(&self) -> String {
+        "5eed000000000001".to_owned()
+    }
+
+    fn simulated(&self) -> bool {
+        true
+    }
+}
+
 struct WorldSource(Rc<RefCell<World>>);
 
 impl CodeSource for WorldSource {
@@ -301,6 +318,23 @@ fn stopped_or_orphaned_it_goes_on_where_it_was() {
     let mut person = Person::new(&world, &[]);
     assert_eq!(guided(&mut second, &world, &mut person).unwrap(), End::Complete);
     assert_eq!(second.points().len(), 9);
+}
+
+#[test]
+fn a_controller_that_falls_silent_is_not_waited_for_without_a_word() {
+    let (_folder, mut session) = session(4, 1);
+    let world = World::new(1, Flaws::default());
+    let mut person = Person::new(&world, &["", "q"]);
+    let mut guide = Guide {
+        session: &mut session,
+        source: &mut Mute,
+        reference: &mut Typed,
+        talk: &mut person,
+        rules: SettlingRules::default(),
+        nominal_volts_per_code: 0.3125,
+    };
+    assert_eq!(guide.run().unwrap(), End::Stopped);
+    assert!(person.heard("No codes came for ten seconds: do not assume 0 V"), "{:#?}", person.heard);
 }
 
 #[test]

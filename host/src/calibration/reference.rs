@@ -62,7 +62,7 @@ fn number(digits: &str) -> Result<String, &'static str> {
 }
 
 /// Whether a reference can belong to what the divider shows: a tenth and 20 V are more than any divider is off.
-fn plausible(volts: f64, expected: f64) -> bool {
+pub(crate) fn plausible(volts: f64, expected: f64) -> bool {
     (volts - expected).abs() <= 20.0 + 0.1 * expected.abs()
 }
 

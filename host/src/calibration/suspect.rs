@@ -59,7 +59,7 @@ pub fn guess(typed: f64, expected: f64) -> &'static str {
 }
 
 /// A guess as the end of a sentence.
-pub(super) fn ended(guess: &'static str) -> &'static str {
+pub(crate) fn ended(guess: &'static str) -> &'static str {
     if guess.is_empty() { "." } else { guess }
 }
 

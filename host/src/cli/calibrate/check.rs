@@ -4,7 +4,7 @@ use std::{path::PathBuf, time::Duration};
 
 use super::guided::{SourceArgs, open_source};
 use crate::{
-    calibration::{Certificate, CodeEvent, Codes, Severity, chart, parse_typed_volts},
+    calibration::{Certificate, CodeEvent, Codes, Severity, chart, ended, guess, parse_typed_volts, plausible},
     cli::{Failure, bench},
 };
 
@@ -47,6 +47,14 @@ pub(super) fn run(args: &CheckArgs) -> Result<(), Failure> {
         (codes.sense_code, codes.cross_code),
         codes.enclosure_celsius,
     );
+    if !plausible(volts, check.sense_volts) {
+        let why = ended(guess(volts, check.sense_volts));
+        return Err(Failure::Job(format!(
+            "the reference is given as {volts} V, but the main sense shows {:.1} V{why} Nothing was written; check that the \
+             voltage is on, the value typed, and then the divider: treat it as live",
+            check.sense_volts
+        )));
+    }
     let file = chart::chart_path(path);
     let mut checks = chart::load(&file).map_err(Failure::job)?;
     if !args.dry {
@@ -63,7 +71,10 @@ pub(super) fn run(args: &CheckArgs) -> Result<(), Failure> {
     }
 }
 
-/// The mean of all codes of a table, or of a window of a live source.
+/// How many readings of a live source are averaged: ten seconds.
+const LIVE_READINGS: f64 = 1000.0;
+
+/// The mean of all codes of a table, or of ten seconds of a live source.
 fn mean_codes(args: &SourceArgs, device: &str) -> Result<Codes, Failure> {
     let mut source = open_source(args, device, false)?;
     let (mut sum, mut count) = ((0.0, 0.0), 0.0);
@@ -77,7 +88,7 @@ fn mean_codes(args: &SourceArgs, device: &str) -> Result<Codes, Failure> {
             known += 1.0;
         }
         latest = Some(codes.utc_ns);
-        if count >= 2000.0 {
+        if args.is_live() && count >= LIVE_READINGS {
             break;
         }
     }

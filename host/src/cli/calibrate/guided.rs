@@ -1,10 +1,15 @@
 //! `ringvolt calibrate run` and `resume`: the guided sequence.
 
-use std::{fs::File, path::PathBuf, time::Duration};
+use std::{
+    fs::File,
+    path::{Path, PathBuf},
+    time::Duration,
+};
 
 use super::{
     IssueArgs, ReferenceArgs,
     fit::{Origin, finish},
+    live::LinkSource,
     terminal::Terminal,
 };
 use crate::{
@@ -13,15 +18,27 @@ use crate::{
     },
     cli::{Failure, bench},
     instrument::{Address, Meter, Question},
+    link,
     profile::Profile,
 };
 
 /// Where the codes come from.
 #[derive(Debug, clap::Args)]
+#[group(required = true, multiple = false)]
 pub(super) struct SourceArgs {
+    /// Codes from the controller: a serial port, or tcp:HOST:PORT.
+    #[arg(long, value_name = "LINK")]
+    link: Option<String>,
     /// Codes from a CSV table with the columns time_utc, sense_code, cross_code and enclosure_celsius.
     #[arg(long, value_name = "FILE")]
-    codes: PathBuf,
+    codes: Option<PathBuf>,
+}
+
+impl SourceArgs {
+    /// Whether the codes come from a controller, and so never end.
+    pub(super) const fn is_live(&self) -> bool {
+        self.link.is_some()
+    }
 }
 
 /// How the reference is read.
@@ -231,15 +248,32 @@ fn open_reference(args: &MeterArgs) -> Result<Box<dyn ReferenceSource>, Failure>
     Ok(Box::new(Metered::new(meter, question, args.meter_ratio, args.meter_readings)))
 }
 
-/// Opens the source of codes.
+/// Opens the source of codes. `device` is the profile's board, empty for any; `simulated` is what a table is.
 pub(super) fn open_source(args: &SourceArgs, device: &str, simulated: bool) -> Result<Box<dyn CodeSource>, Failure> {
-    let path = &args.codes;
+    match (&args.link, &args.codes) {
+        (Some(link), _) => open_link(link, device),
+        (None, Some(codes)) => open_table(codes, device, simulated),
+        (None, None) => Err(Failure::Usage("say where the codes come from: --link or --codes".to_owned())),
+    }
+}
+
+fn open_link(link: &str, device: &str) -> Result<Box<dyn CodeSource>, Failure> {
+    let address: link::Address = link.parse().map_err(Failure::usage)?;
+    let source = LinkSource::connect(&address).map_err(Failure::Job)?;
+    let found = source.device();
+    if !device.is_empty() && found != device {
+        let sentence = format!("the profile's board is {device}, but {address} is board {found}; take the right one");
+        return Err(Failure::Job(sentence));
+    }
+    Ok(Box::new(source))
+}
+
+fn open_table(path: &Path, device: &str, simulated: bool) -> Result<Box<dyn CodeSource>, Failure> {
     let file = File::open(path).map_err(|error| Failure::Usage(format!("cannot read {}: {error}", path.display())))?;
     if device.is_empty() {
-        return Err(Failure::Usage(
-            "controller.device in the profile is empty, but a table does not say which board it is from; fill it in"
-                .to_owned(),
-        ));
+        let sentence =
+            "controller.device in the profile is empty, but a table does not say which board it is from; fill it in";
+        return Err(Failure::Usage(sentence.to_owned()));
     }
     Ok(Box::new(CsvSource::new(Box::new(file), &path.display().to_string(), device, simulated)))
 }

@@ -3,7 +3,9 @@
 mod check;
 mod fit;
 mod guided;
+mod live;
 mod show;
+mod store;
 mod terminal;
 
 use std::path::PathBuf;
@@ -30,6 +32,8 @@ enum Action {
     Fit(fit::FitArgs),
     /// Check one voltage against the reference and keep it in the control chart.
     Check(check::CheckArgs),
+    /// Store the profile's certificate and settings in the controller.
+    Store(store::StoreArgs),
     /// Show a certificate, or write it as a page to print.
     Show(show::ShowArgs),
 }
@@ -44,6 +48,7 @@ pub fn run(args: &Args) -> Result<(), Failure> {
         Action::Resume(args) => guided::resume(args),
         Action::Fit(args) => fit::run(args),
         Action::Check(args) => check::run(args),
+        Action::Store(args) => store::run(args),
         Action::Show(args) => show::run(args),
     }
 }
