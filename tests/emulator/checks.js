@@ -33,7 +33,7 @@ const groups = {
   },
   program: () => program.wholeMinute(context),
   repeat: () => program.repeatable(context),
-  latency: () => permit.latency(image, 1000),
+  latency: () => permit.latency(image, Number(process.env.RINGVOLT_PHASES ?? 1000)),
   faults: () => permit.faults(image),
   bus: () => permit.heldBus(image),
   dead: () => permit.deadLoop(readImage(deadElf)),

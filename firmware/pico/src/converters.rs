@@ -90,20 +90,17 @@ impl<B: PatientBus> Converter<B> {
         }
     }
 
-    /// Sets up or checks the converter if that is due and its bus is free; `false` where the bus failed.
+    /// Sets up or checks the converter if that is due and its bus is free; `true` where that took time.
     pub fn attend(&mut self, now_us: u64, round: &mut Round) -> bool {
         let outcome = match self.state {
             State::Waiting { until_us } if now_us >= until_us => self.set_up(now_us),
             State::Running { check_us } if now_us >= check_us => self.check(now_us, round),
-            _ => return true,
+            _ => return false,
         };
-        match outcome {
-            Ok(()) => true,
-            Err(error) => {
-                self.failed(error, round);
-                false
-            }
+        if let Err(error) = outcome {
+            self.failed(error, round);
         }
+        true
     }
 
     fn driver(&mut self) -> Ads1115<&mut B> {

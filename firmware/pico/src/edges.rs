@@ -15,7 +15,10 @@ use core::cell::RefCell;
 
 use critical_section::Mutex;
 use heapless::Vec;
-use ringvolt_firmware::io::{Channel, Edge};
+use ringvolt_firmware::{
+    contacts::GLITCH_US,
+    io::{Channel, Edge},
+};
 use ringvolt_protocol::{Contacts, Line};
 use rp2040_hal::pac::{self, interrupt};
 
@@ -29,6 +32,9 @@ const EDGE_HIGH: u32 = 1 << 3;
 
 /// More edges between two polls than any contact makes: past them a line is noise, and must not eat the processor.
 const CAPACITY: usize = 32;
+
+/// The controller believes a level that has stood for its glitch filter's time; a little more, so that it has by then.
+const SETTLED_US: u32 = GLITCH_US as u32 + 10;
 
 const READY: [(u32, Channel); 2] = [(8, Channel::Sense), (9, Channel::Cross)];
 const LINES: [(u32, Line); 6] = [
@@ -185,5 +191,6 @@ fn IO_IRQ_BANK0() {
         wake::nudge();
     } else {
         wake::wake();
+        wake::wake_in(SETTLED_US);
     }
 }

@@ -211,9 +211,9 @@ fn main() -> ! {
         link.send(&mut controller);
         round.clear();
         start_reading(&mut sense, &mut cross);
-        // Waiting for a bus comes last, and for one bus in a round where it failed: a held bus delays the next look at the
-        // interlock by less than a tick.
-        if sense.attend(sample.now_us, &mut round) {
+        // Waiting for a bus comes last, and for one of the two in a round: this is what delays the next look at the
+        // interlock, by less than a tick even where the bus is held.
+        if !sense.attend(sample.now_us, &mut round) {
             cross.attend(sample.now_us, &mut round);
         }
     }

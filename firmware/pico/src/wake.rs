@@ -8,6 +8,8 @@ use core::sync::atomic::{AtomicBool, Ordering};
 
 use cortex_m::peripheral::{SYST, syst::SystClkSource};
 
+use rp2040_hal::pac::{self, interrupt};
+
 use crate::clock::now_us;
 
 /// The main loop polls at least this often, hertz.
@@ -28,6 +30,26 @@ pub fn nudge() {
     NUDGED.store(true, Ordering::Release);
 }
 
+/// Wakes the loop once more after `us`, besides every tick: where the controller waits for a level to have stood still,
+/// the next tick could be late by its whole length.
+pub fn wake_in(us: u32) {
+    let timer = timer();
+    // SAFETY: any value is a time. It is written well before it comes, or the alarm would wait for the counter to wrap;
+    // what was armed before is replaced.
+    #[allow(unsafe_code)]
+    unsafe {
+        timer.alarm0().write(|w| w.bits((now_us() as u32).wrapping_add(us)));
+    }
+}
+
+fn timer() -> &'static pac::timer::RegisterBlock {
+    // SAFETY: alarm 0 and its interrupt bits belong to this module; nobody else uses any alarm.
+    #[allow(unsafe_code)]
+    unsafe {
+        &*pac::TIMER::ptr()
+    }
+}
+
 /// Sleeps, and keeps the books on it.
 pub struct Sleep {
     span_start_us: u64,
@@ -43,6 +65,12 @@ impl Sleep {
         systick.clear_current();
         systick.enable_counter();
         systick.enable_interrupt();
+        timer().inte().modify(|_, w| w.alarm_0().set_bit());
+        // SAFETY: the handler needs no state but a flag.
+        #[allow(unsafe_code)]
+        unsafe {
+            pac::NVIC::unmask(pac::Interrupt::TIMER_IRQ_0);
+        }
         Self { span_start_us: now_us(), asleep_us: 0, share: None }
     }
 
@@ -77,5 +105,11 @@ impl Sleep {
 
 #[cortex_m_rt::exception]
 fn SysTick() {
+    wake();
+}
+
+#[interrupt]
+fn TIMER_IRQ_0() {
+    timer().intr().write(|w| w.alarm_0().clear_bit_by_one());
     wake();
 }
