@@ -9,7 +9,8 @@ use std::{
 use jiff::Timestamp;
 use serde::{Deserialize, Serialize};
 
-use super::{Certificate, Channel, Finding, Severity, apply::combined_volts, assess::finding, least_squares::solve};
+use super::{Certificate, Channel, Finding, Severity, apply::combined_volts, assess::finding};
+use crate::metrology::solve;
 use crate::text::{self, TextError};
 
 const MAX_CHART_BYTES: u64 = 4 << 20;

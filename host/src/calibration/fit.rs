@@ -1,9 +1,7 @@
 //! From points to code-to-volts: straight line or bent, decided by F-test; outliers named, never dropped in silence.
 
-use super::{
-    Channel, ChannelFit, Point,
-    least_squares::{Solution, solve, student_two_sided},
-};
+use super::{Channel, ChannelFit, Point};
+use crate::metrology::{Solution, solve, student_two_sided};
 
 /// What a single point is taken to scatter before the points themselves have told it: 0.1 V and 50 ppm of the voltage.
 /// Only the ratio matters, as relative weight of low and high points (a judgement, no source).

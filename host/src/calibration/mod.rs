@@ -10,7 +10,6 @@ mod fit;
 mod guide;
 mod html;
 mod issue;
-mod least_squares;
 mod plan;
 pub mod plot;
 mod points;

@@ -1,8 +1,8 @@
-//! Weighted linear least squares with covariance, and the one distribution the procedure needs.
+//! Weighted linear least squares with covariance, and the one distribution that tests of significance need.
 
 /// A solved system.
 #[derive(Clone, Debug)]
-pub(super) struct Solution {
+pub struct Solution {
     /// The coefficients.
     pub coefficients: Vec<f64>,
     /// Inverse of the weighted normal matrix: times the variance of unit weight it is the covariance.
@@ -38,7 +38,7 @@ fn dot(a: &[f64], b: &[f64]) -> f64 {
 /// (modified Gram-Schmidt, each done twice, which is as good as Householder's for systems this small).
 ///
 /// `None` where there are fewer points than coefficients and one more, or the columns do not differ.
-pub(super) fn solve(columns: &[Vec<f64>], values: &[f64], sigmas: &[f64]) -> Option<Solution> {
+pub fn solve(columns: &[Vec<f64>], values: &[f64], sigmas: &[f64]) -> Option<Solution> {
     let (count, terms) = (values.len(), columns.len());
     if count <= terms {
         return None;
@@ -96,7 +96,7 @@ fn invert_upper(upper: &[Vec<f64>]) -> Vec<Vec<f64>> {
 
 /// Probability that Student's t with `freedom` degrees of freedom is at least as large in size as `t`. With
 /// `t = sqrt(F)` it is the probability of an F of one and `freedom` degrees.
-pub(super) fn student_two_sided(t: f64, freedom: f64) -> f64 {
+pub fn student_two_sided(t: f64, freedom: f64) -> f64 {
     if !t.is_finite() || freedom < 1.0 {
         return if t.is_infinite() { 0.0 } else { 1.0 };
     }
@@ -185,6 +185,49 @@ mod tests {
         }
         assert!((libm::sqrt(solution.unit_variance()) / 0.205177424076185E-03 - 1.0).abs() < 1e-9);
         assert!((solution.leverages.iter().sum::<f64>() - 3.0).abs() < 1e-12);
+    }
+
+    /// NIST StRD, data set Norris: an ozone monitor against NIST's, straight line; certified values.
+    #[test]
+    fn nist_norris_is_reproduced_to_nine_digits() {
+        let x = [
+            0.2, 337.4, 118.2, 884.6, 10.1, 226.5, 666.3, 996.3, 448.6, 777.0, 558.2, 0.4, 0.6, 775.5, 666.9, 338.0,
+            447.5, 11.6, 556.0, 228.1, 995.8, 887.6, 120.2, 0.3, 0.3, 556.8, 339.1, 887.2, 999.0, 779.0, 11.1, 118.3,
+            229.2, 669.1, 448.9, 0.5,
+        ];
+        let y = [
+            0.1, 338.8, 118.1, 888.0, 9.2, 228.1, 668.5, 998.5, 449.1, 778.9, 559.2, 0.3, 0.1, 778.1, 668.8, 339.3,
+            448.9, 10.8, 557.7, 228.3, 998.0, 888.8, 119.6, 0.3, 0.6, 557.6, 339.3, 888.0, 998.5, 778.9, 10.2, 117.6,
+            228.9, 668.4, 449.2, 0.2,
+        ];
+        let solution = solve(&[vec![1.0; 36], x.to_vec()], &y, &[1.0; 36]).unwrap();
+        let certified = [(-0.262323073774029, 0.232818234301152), (1.00211681802045, 0.429796848199937E-03)];
+        for (index, (value, deviation)) in certified.into_iter().enumerate() {
+            let found = solution.coefficients[index];
+            assert!((found / value - 1.0).abs() < 1e-9, "{found} {value}");
+            let found = libm::sqrt(solution.cofactors[index][index] * solution.unit_variance());
+            assert!((found / deviation - 1.0).abs() < 1e-9, "{found} {deviation}");
+        }
+        assert!((libm::sqrt(solution.unit_variance()) / 0.884796396144373 - 1.0).abs() < 1e-9);
+    }
+
+    /// JCGM 100:2008, example H.3: calibration of a thermometer; its published results.
+    #[test]
+    fn gum_thermometer_example_comes_out() {
+        let t = [21.521, 22.012, 22.512, 23.003, 23.507, 23.999, 24.513, 25.002, 25.503, 26.010, 26.511];
+        let b = [-0.171, -0.169, -0.166, -0.159, -0.164, -0.165, -0.156, -0.157, -0.159, -0.161, -0.160];
+        let solution = solve(&[vec![1.0; 11], t.map(|t: f64| t - 20.0).to_vec()], &b, &[1.0; 11]).unwrap();
+        let [y1, y2] = solution.coefficients[..] else { panic!("two coefficients") };
+        let s = libm::sqrt(solution.unit_variance());
+        let covariance = |i: usize, j: usize| solution.cofactors[i][j] * s * s;
+        let (s1, s2) = (libm::sqrt(covariance(0, 0)), libm::sqrt(covariance(1, 1)));
+        assert!((y1 + 0.1712).abs() < 5e-5 && (s1 - 0.0029).abs() < 5e-5, "{y1} {s1}");
+        assert!((y2 - 0.00218).abs() < 5e-6 && (s2 - 0.00067).abs() < 5e-6, "{y2} {s2}");
+        assert!((covariance(0, 1) / (s1 * s2) + 0.930).abs() < 5e-4);
+        assert!((s - 0.0035).abs() < 5e-5);
+        let at_30 = y1 + y2 * 10.0;
+        let u = libm::sqrt(covariance(0, 0) + 100.0 * covariance(1, 1) + 20.0 * covariance(0, 1));
+        assert!((at_30 + 0.1494).abs() < 5e-5 && (u - 0.0041).abs() < 5e-5, "{at_30} {u}");
     }
 
     #[test]
