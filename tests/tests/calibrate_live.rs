@@ -16,8 +16,22 @@ fn a_controller_takes_its_certificate_and_gives_codes_that_settle() {
     let path = |name: &str| folder.path().join(name).display().to_string();
     let (link, frames, journal, bench) =
         (path("controller"), path("frames"), path("c.jsonl"), example_bench().display().to_string());
-    let mut simulated =
-        Running::start(&["simulate", "--link-path", &link, "--frames", &frames, "--seed", "4", "--seconds", "300"]);
+    // A bench on which nothing happens while this test looks.
+    let script = path("script.toml");
+    std::fs::write(&script, "[[happening]]\nat_seconds = 250.0\ndo = \"set-volts\"\nvolts = 2500.0\n").unwrap();
+    let mut simulated = Running::start(&[
+        "simulate",
+        "--link-path",
+        &link,
+        "--frames",
+        &frames,
+        "--seed",
+        "4",
+        "--seconds",
+        "300",
+        "--script",
+        &script,
+    ]);
     simulated.wait_for_line("SIMULATED");
 
     let stored = run(&["calibrate", "store", "--bench", &bench, "--link", &link]);
