@@ -21,6 +21,11 @@ FLASH = range(0x10000000, 0x10000000 + 2 * 1024 * 1024 - 24 * 1024)
 RAM = range(0x20000000, 0x20042000)
 FLAG_WRITE, FLAG_ALLOC = 1, 2
 NOBITS = 8
+SYMTAB = 2
+
+# What the image may take, bytes.
+MOST_FLASH = 96 * 1024
+MOST_RAM_BESIDE_JOURNAL = 24 * 1024
 
 
 class Bad(Exception):
@@ -39,6 +44,7 @@ def read_elf(path):
         if kind == 1 and size:
             segments.append((physical, data[offset : offset + size]))
     raw = [struct.unpack_from("<10I", data, sh_off + i * sh_size) for i in range(sh_count)]
+    symbols = next((section for section in raw if section[1] == SYMTAB), None)
     names = raw[names_index]
     sections = []
     for name, kind, flags, address, _, size, *_ in raw:
@@ -46,7 +52,19 @@ def read_elf(path):
         text = data[start : data.index(b"\0", start)].decode()
         if flags & FLAG_ALLOC and size:
             sections.append((text, kind, address, size))
-    return segments, sections
+    return segments, sections, size_of_journal(data, raw, symbols) if symbols else 0
+
+
+def size_of_journal(data, raw, symbols):
+    """The journal's static, by its symbol: it is what the RAM is for, and is counted apart."""
+    names = raw[symbols[6]][4]
+    total = 0
+    for at in range(symbols[4], symbols[4] + symbols[5], 16):
+        name, address, size = struct.unpack_from("<III", data, at)
+        start = names + name
+        if address in RAM and b"JOURNAL" in data[start : data.index(b"\0", start)]:
+            total += size
+    return total
 
 
 def pages_of(segments):
@@ -85,26 +103,31 @@ def read_uf2(path):
     return pages
 
 
-def print_use(sections, pages):
-    flash = ram = journal = 0
+def print_use(sections, journal, pages):
+    flash = ram = 0
     print(f"{'section':<16}{'address':>12}{'bytes':>10}")
     for name, kind, address, size in sections:
         print(f"{name:<16}{address:>#12x}{size:>10}")
         if address in RAM:
             ram += size
-            if name.startswith(".journal"):
-                journal += size
             if kind != NOBITS:
                 flash += size  # initial values
         else:
             flash += size
     print(f"flash {flash} bytes ({flash / 1024:.1f} KiB) in {len(pages)} UF2 blocks")
-    print(f"static RAM {ram} bytes ({ram / 1024:.1f} KiB) of {len(RAM) // 1024} KiB")
+    print(
+        f"static RAM {ram} bytes ({ram / 1024:.1f} KiB) of {len(RAM) // 1024} KiB: "
+        f"journal {journal}, everything else {ram - journal}; the stack has the other {len(RAM) - ram}"
+    )
+    if flash > MOST_FLASH:
+        raise Bad(f"the image takes {flash} bytes of flash; {MOST_FLASH} are allowed")
+    if ram - journal > MOST_RAM_BESIDE_JOURNAL:
+        raise Bad(f"static RAM beside the journal is {ram - journal} bytes; {MOST_RAM_BESIDE_JOURNAL} are allowed")
 
 
 def main():
     elf, uf2 = Path(sys.argv[1]), Path(sys.argv[2])
-    segments, sections = read_elf(elf)
+    segments, sections, journal = read_elf(elf)
     pages = pages_of(segments)
     write_uf2(pages, uf2)
     back = read_uf2(uf2)
@@ -114,7 +137,7 @@ def main():
         got = b"".join(back[page] for page in range(address // PAGE * PAGE, address + len(content), PAGE))
         if got[address % PAGE :][: len(content)] != content:
             raise Bad(f"{uf2} does not hold the segment at {address:#010x}")
-    print_use(sections, pages)
+    print_use(sections, journal, pages)
     print(f"{uf2.name} reads back as the image, byte for byte")
 
 

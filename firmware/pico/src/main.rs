@@ -139,9 +139,10 @@ fn main() -> ! {
         certificate: records::certificate(&mut flash),
         settings: records::settings(&mut flash),
     };
+    let journal = &raw mut JOURNAL;
     // SAFETY: `main` runs once, and this is the only place that names the journal.
     #[allow(unsafe_code)]
-    let journal = unsafe { &mut *(&raw mut JOURNAL) };
+    let journal = unsafe { &mut *journal };
     let mut controller = Controller::new(boot, journal);
 
     let mut serial_number = [0; 16];
