@@ -87,9 +87,10 @@ pub fn run(args: &Args) -> Result<(), Failure> {
         SourceName::Lamp if args.video.is_some() => from_video(args, &reader, &reduction.profile().camera)?,
         SourceName::Lamp => from_lamp(args, &reader, &reduction.profile().camera)?,
     };
+    let profile_text = job(reader.header())?.profile_text;
     drop(reader);
     let known = frames.iter().filter(|frame| frame.exposure.is_ok()).count();
-    let counts = reduce_with(&args.run, &reduction, "align", Some(&frames))?;
+    let counts = reduce_with(&args.run, &reduction, &profile_text, "align", Some(&frames))?;
     println!("{known} of {} frames have an exposure now", frames.len());
     let VerdictCounts { good, marked, refused } = counts;
     println!("{good} good, {marked} marked, {refused} refused");

@@ -4,7 +4,7 @@ use std::path::PathBuf;
 
 use clap::Args as ClapArgs;
 
-use super::{Failure, stamp::of_run};
+use super::{Failure, stamp::newest};
 use crate::{export, run::RunReader};
 
 /// Write frames, readings, events and the rest as CSV with a Frictionless `datapackage.json`.
@@ -20,7 +20,7 @@ pub struct Args {
 /// Exports.
 pub fn run(args: &Args) -> Result<(), Failure> {
     let reader = RunReader::open(&args.run).map_err(Failure::job)?;
-    let tables = export::export(&reader, &of_run(&reader)?, &args.out).map_err(Failure::job)?;
+    let tables = export::export(&reader, &newest(&reader)?, &args.out).map_err(Failure::job)?;
     println!("{} tables in {}", tables, args.out.display());
     Ok(())
 }

@@ -4,7 +4,7 @@ use std::path::PathBuf;
 
 use clap::Args as ClapArgs;
 
-use super::{Failure, stamp::of_run};
+use super::{Failure, stamp::newest};
 use crate::{report, run::RunReader};
 
 /// Write a self-contained HTML report of a run.
@@ -20,7 +20,7 @@ pub struct Args {
 /// Reports.
 pub fn run(args: &Args) -> Result<(), Failure> {
     let reader = RunReader::open(&args.run).map_err(Failure::job)?;
-    let html = report::html(&reader, &of_run(&reader)?).map_err(Failure::job)?;
+    let html = report::html(&reader, &newest(&reader)?).map_err(Failure::job)?;
     std::fs::write(&args.out, html).map_err(|error| {
         Failure::Job(format!("{} could not be written ({error}): check the folder", args.out.display()))
     })?;

@@ -97,7 +97,7 @@ pub fn record(args: &Args, observer: &mut dyn Observer, stop: &Arc<AtomicBool>) 
     // The watcher ends by itself; that it panicked would be its own message.
     let _ = watcher.join();
     let recorded = recorded.map_err(Failure::job)?;
-    super::stamp::reduce(&args.out, &reduction, "run")?;
+    super::stamp::reduce(&args.out, &reduction, &bench.profile_text, "run")?;
     Ok(recorded)
 }
 

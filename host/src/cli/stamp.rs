@@ -25,14 +25,17 @@ pub struct Args {
 
 /// Stamps and prints how it came out.
 pub fn run(args: &Args) -> Result<(), Failure> {
-    let reduction = match &args.bench {
+    let (reduction, profile_text) = match &args.bench {
         Some(path) => {
             let bench = bench_files::load(path)?;
-            Reduction::new(&bench.profile, bench.certificate.as_ref())
+            (Reduction::new(&bench.profile, bench.certificate.as_ref()), bench.profile_text)
         }
-        None => of_run(&RunReader::open(&args.run).map_err(Failure::job)?)?,
+        None => {
+            let reader = RunReader::open(&args.run).map_err(Failure::job)?;
+            (of_run(&reader)?, reader.header().map_err(Failure::job)?.profile_text)
+        }
     };
-    let counts = reduce(&args.run, &reduction, "stamp")?;
+    let counts = reduce(&args.run, &reduction, &profile_text, "stamp")?;
     println!(
         "{} frames: {} good, {} marked, {} refused",
         counts.good + counts.marked + counts.refused,
@@ -57,34 +60,46 @@ pub struct VerdictCounts {
 /// The reduction a run was recorded with: its own profile and certificate.
 pub fn of_run(reader: &RunReader) -> Result<Reduction, Failure> {
     let header = reader.header().map_err(Failure::job)?;
+    of_texts(reader, &header.profile_text, header.certificate_text.as_deref())
+}
+
+/// The newest reduction in a run file: the one whose stamps are shown; where there is none, that of the recording.
+pub fn newest(reader: &RunReader) -> Result<Reduction, Failure> {
+    match reader.reductions().map_err(Failure::job)?.pop() {
+        Some(row) => of_texts(reader, &row.profile_text, row.certificate_text.as_deref()),
+        None => of_run(reader),
+    }
+}
+
+fn of_texts(reader: &RunReader, profile: &str, certificate: Option<&str>) -> Result<Reduction, Failure> {
     let origin = format!("the profile in {}", reader.path().display());
-    let profile = Profile::parse(&header.profile_text, &origin).map_err(Failure::job)?;
+    let profile = Profile::parse(profile, &origin).map_err(Failure::job)?;
     let origin = format!("the certificate in {}", reader.path().display());
-    let certificate = header.certificate_text.map(|text| Certificate::parse(&text, &origin)).transpose();
+    let certificate = certificate.map(|text| Certificate::parse(text, &origin)).transpose();
     Ok(Reduction::new(&profile, certificate.map_err(Failure::job)?.as_ref()))
 }
 
 /// Stamps all frames of a run into a new reduction.
-pub fn reduce(run: &Path, reduction: &Reduction, command: &str) -> Result<VerdictCounts, Failure> {
-    reduce_with(run, reduction, command, None)
+pub fn reduce(run: &Path, reduction: &Reduction, profile_text: &str, command: &str) -> Result<VerdictCounts, Failure> {
+    reduce_with(run, reduction, profile_text, command, None)
 }
 
 /// Stamps all frames of a run into a new reduction, with these exposures instead of their own where any are given.
 pub fn reduce_with(
     run: &Path,
     reduction: &Reduction,
+    profile_text: &str,
     command: &str,
     aligned: Option<&[FrameRow]>,
 ) -> Result<VerdictCounts, Failure> {
     let reader = RunReader::open(run).map_err(Failure::job)?;
     let recording = Recording::open(&reader).map_err(Failure::job)?;
     let mut writer = RunWriter::append(run).map_err(Failure::job)?;
-    let header = reader.header().map_err(Failure::job)?;
     let certificate = reduction.certificate().map(Certificate::to_toml);
     let software = concat!("ringvolt ", env!("CARGO_PKG_VERSION"));
     let created = RealClock::new().utc_ns();
     let key = writer
-        .begin_reduction(created, command, software, &header.profile_text, certificate.as_deref())
+        .begin_reduction(created, command, software, profile_text, certificate.as_deref())
         .map_err(Failure::job)?;
     let mut counts = VerdictCounts::default();
     for frame in reader.frames().map_err(Failure::job)? {

@@ -1,6 +1,9 @@
 //! Video through Y4M, so that any converter can feed it: the brightness of a patch in every frame.
 
-use std::io::Read;
+use std::{
+    cell::Cell,
+    io::{self, Read},
+};
 
 use thiserror::Error;
 
@@ -69,6 +72,8 @@ const MOST_BYTES: usize = 256 << 20;
 pub fn patch_brightness(video: impl Read, patch: Patch) -> Result<PatchClip, VideoError> {
     let damaged = |error: y4m::Error| VideoError::Damaged(error.to_string());
     let limits = y4m::Limits { bytes: MOST_BYTES };
+    let taken = Cell::new(0u64);
+    let video = Counted { video, taken: &taken };
     let mut decoder = y4m::Decoder::new_with_limits(video, limits).map_err(damaged)?;
     let (width, height) = (decoder.get_width(), decoder.get_height());
     if patch.x.saturating_add(patch.width) > width || patch.y.saturating_add(patch.height) > height {
@@ -82,17 +87,35 @@ pub fn patch_brightness(video: impl Read, patch: Patch) -> Result<PatchClip, Vid
         return Err(VideoError::Damaged("it states no frame rate".to_owned()));
     }
     let mut brightness = Vec::new();
+    let mut whole = taken.get();
     loop {
         match decoder.read_frame() {
             Ok(frame) => brightness.push(mean_luma(frame.get_y_plane(), width, patch)),
-            Err(y4m::Error::EOF) => break,
+            // The library calls it an end, too, when the stream breaks off within a frame.
+            Err(y4m::Error::EOF) if taken.get() == whole => break,
+            Err(y4m::Error::EOF) => return Err(VideoError::Damaged("it breaks off within a frame".to_owned())),
             Err(error) => return Err(damaged(error)),
         }
+        whole = taken.get();
         if brightness.len() > MOST_FRAMES {
             return Err(VideoError::Damaged(format!("it has more than {MOST_FRAMES} frames")));
         }
     }
     Ok(PatchClip { frame_seconds: rate.den as f64 / rate.num as f64, brightness })
+}
+
+/// Counts the bytes that are taken from a stream.
+struct Counted<'a, R> {
+    video: R,
+    taken: &'a Cell<u64>,
+}
+
+impl<R: Read> Read for Counted<'_, R> {
+    fn read(&mut self, buffer: &mut [u8]) -> io::Result<usize> {
+        let count = self.video.read(buffer)?;
+        self.taken.set(self.taken.get() + count as u64);
+        Ok(count)
+    }
 }
 
 fn mean_luma(plane: &[u8], width: usize, patch: Patch) -> f64 {

@@ -35,7 +35,8 @@ impl Calibration for CertificateAt<'_> {
 
     fn covers(&self, volts: f64, code: f64) -> bool {
         let conditions = &self.certificate.conditions;
-        let inside = (conditions.volts_min..=conditions.volts_max).contains(&volts);
+        // The certificate counts volts as the divider sees them, with their sign.
+        let inside = (conditions.volts_min..=conditions.volts_max).contains(&(self.polarity * volts));
         inside && !self.certificate.outside(Channel::Sense, code, self.enclosure_celsius).code
     }
 
