@@ -96,10 +96,12 @@ impl<J: BorrowMut<Journal>> Controller<J> {
     /// A controller that has just been powered up: the permit is withdrawn.
     pub fn new(boot: Boot, mut journal: J) -> Self {
         let mut standing = TripSet::EMPTY;
-        if boot.settings.is_err() {
+        let stored = boot.settings.ok().flatten().filter(|settings| settings.fault().is_none());
+        // A record out of its ranges is as unreadable as a damaged one: the defaults know nothing of this bench.
+        if stored.is_none() && boot.settings != Ok(None) {
             standing.insert(Trip::SettingsUnreadable);
         }
-        let settings = boot.settings.ok().flatten().filter(|settings| settings.fault().is_none()).unwrap_or_default();
+        let settings = stored.unwrap_or_default();
         // A record made with another board is as good as none.
         let certificate = boot.certificate.filter(|certificate| certificate.device == boot.device);
         let mut interlock = Interlock::new(times(&settings));
