@@ -43,6 +43,10 @@ pub struct Args {
     /// For `lamp`: where the sync lamp lies in the picture, X,Y,WIDTH,HEIGHT in pixels.
     #[arg(long, value_name = "X,Y,W,H")]
     pub patch: Option<Patch>,
+    /// For `lamp`: time a rolling shutter takes from one row to the next, microseconds (10 to 30 are common); 0 for a
+    /// global shutter.
+    #[arg(long, value_name = "MICROSECONDS", default_value_t = 0.0)]
+    pub row_us: f64,
     /// For `lamp`: a Y4M video instead of the run's frames; `-` is standard input.
     #[arg(long, value_name = "FILE")]
     pub video: Option<PathBuf>,
@@ -76,6 +80,9 @@ pub enum SourceName {
 pub fn run(args: &Args) -> Result<(), Failure> {
     if !(args.within > 0.0 && args.within <= 86_400.0) {
         return Err(Failure::Usage(format!("--within {}: give 0 to 86400 s", args.within)));
+    }
+    if !(0.0..=10_000.0).contains(&args.row_us) {
+        return Err(Failure::Usage(format!("--row-us {}: give 0 to 10000 us", args.row_us)));
     }
     let reader = RunReader::open(&args.run).map_err(Failure::job)?;
     let reduction = of_run(&reader)?;
@@ -205,18 +212,21 @@ fn from_lamp(args: &Args, reader: &RunReader, camera: &Camera) -> Result<Vec<Fra
     frames.sort_by_key(|frame| (coarse_ns(frame), frame.frame.clone()));
     let first = frames.first().map(coarse_ns).ok_or_else(|| Failure::Job("the run has no frames".to_owned()))?;
     let mut samples = Vec::new();
+    let mut height = 0;
     for frame in &frames {
         let picture = read_picture(&folder.join(&frame.file)).map_err(Failure::job)?;
         let brightness = patch_of_picture(&picture, patch).ok_or_else(|| {
             Failure::Usage(format!("--patch lies outside {} ({} x {})", frame.file, picture.width, picture.height))
         })?;
+        height = picture.height;
         samples.push(LampFrame { clip_seconds: (coarse_ns(frame) - first) as f64 * 1e-9, brightness });
     }
     let start_us = epoch.clock.device_us(first).ok_or_else(no_clock)?;
     let search = search(args, camera, &samples, start_us as f64 * 1e-6, false);
     let timing = time_frames(&code, &samples, &search).map_err(Failure::job)?;
+    let later = patch.rows_to_middle_seconds(height, args.row_us * 1e-6);
     for (frame, timed) in frames.iter_mut().zip(&timing.frames) {
-        frame.exposure = exposure(epoch, timed, timing.exposure_seconds, timing.exposure_u_seconds);
+        frame.exposure = exposure(epoch, timed, later, timing.exposure_seconds, timing.exposure_u_seconds);
     }
     Ok(frames)
 }
@@ -273,10 +283,11 @@ fn from_video(args: &Args, reader: &RunReader, camera: &Camera) -> Result<Vec<Fr
     };
     let search = search(args, camera, &samples, start_guess, args.times.is_none());
     let timing = time_frames(&code, &samples, &search).map_err(Failure::job)?;
+    let later = patch.rows_to_middle_seconds(clip.height, args.row_us * 1e-6);
     let stem =
         path.file_stem().filter(|_| path != Path::new("-")).map_or("video".into(), |stem| stem.to_string_lossy());
     let rows = timing.frames.iter().enumerate().map(|(index, timed)| {
-        let exposure = exposure(epoch, timed, timing.exposure_seconds, timing.exposure_u_seconds);
+        let exposure = exposure(epoch, timed, later, timing.exposure_seconds, timing.exposure_u_seconds);
         FrameRow {
             frame: format!("{stem}-{:06}", index + 1),
             file: format!("{}#{}", path.display(), index + 1),
@@ -318,8 +329,9 @@ fn frame_times(args: &Args, frame_seconds: f64, count: usize) -> Result<Vec<f64>
     Ok(times.into_iter().map(|time| time - first).collect())
 }
 
-fn exposure(epoch: &Epoch, timed: &TimedFrame, seconds: f64, seconds_u: f64) -> Result<Exposure, String> {
-    let start_us = (timed.centre_seconds - 0.5 * seconds) * 1e6;
+/// The exposure of the rings, which a rolling shutter takes `later` seconds than the lamp's patch.
+fn exposure(epoch: &Epoch, timed: &TimedFrame, later: f64, seconds: f64, seconds_u: f64) -> Result<Exposure, String> {
+    let start_us = (timed.centre_seconds + later - 0.5 * seconds) * 1e6;
     let instant = (start_us >= 0.0).then(|| epoch.clock.utc(start_us as u64)).flatten();
     let instant = instant.ok_or_else(|| "the controller's clock could not be tied to UTC there".to_owned())?;
     Ok(Exposure {

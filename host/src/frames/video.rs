@@ -20,6 +20,15 @@ pub struct Patch {
     pub height: usize,
 }
 
+impl Patch {
+    /// How much later than the patch the middle row of a picture of this height is exposed by a rolling shutter that takes
+    /// `row_seconds` from row to row, seconds. Rings lie about the middle.
+    pub fn rows_to_middle_seconds(&self, height: usize, row_seconds: f64) -> f64 {
+        let patch_row = self.y as f64 + 0.5 * self.height as f64;
+        (0.5 * height as f64 - patch_row) * row_seconds
+    }
+}
+
 impl std::str::FromStr for Patch {
     type Err = String;
 
@@ -56,6 +65,8 @@ pub enum VideoError {
 pub struct PatchClip {
     /// Nominal frame period, seconds.
     pub frame_seconds: f64,
+    /// Height of the picture, pixels.
+    pub height: usize,
     /// Mean luma of the patch in every frame, 0 to 255.
     pub brightness: Vec<f64>,
 }
@@ -101,7 +112,7 @@ pub fn patch_brightness(video: impl Read, patch: Patch) -> Result<PatchClip, Vid
             return Err(VideoError::Damaged(format!("it has more than {MOST_FRAMES} frames")));
         }
     }
-    Ok(PatchClip { frame_seconds: rate.den as f64 / rate.num as f64, brightness })
+    Ok(PatchClip { frame_seconds: rate.den as f64 / rate.num as f64, height, brightness })
 }
 
 /// Counts the bytes that are taken from a stream.
@@ -155,7 +166,7 @@ mod tests {
     #[test]
     fn the_patch_of_every_frame_is_read() {
         let read = patch_brightness(&clip(&[50, 200, 7])[..], PATCH).unwrap();
-        assert_eq!(read, PatchClip { frame_seconds: 0.04, brightness: vec![50.0, 200.0, 7.0] });
+        assert_eq!(read, PatchClip { frame_seconds: 0.04, height: 4, brightness: vec![50.0, 200.0, 7.0] });
     }
 
     #[test]
@@ -166,6 +177,14 @@ mod tests {
         }
         let outside = Patch { x: 7, ..PATCH };
         assert!(matches!(patch_brightness(&whole[..], outside), Err(VideoError::Outside { width: 8, height: 4 })));
+    }
+
+    #[test]
+    fn a_rolling_shutter_reaches_the_middle_later_than_a_patch_above_it() {
+        let patch = Patch { x: 0, y: 10, width: 4, height: 20 };
+        // From row 20 to row 240 at 20 us a row.
+        assert!((patch.rows_to_middle_seconds(480, 20e-6) - 4.4e-3).abs() < 1e-12);
+        assert_eq!(patch.rows_to_middle_seconds(480, 0.0), 0.0);
     }
 
     #[test]

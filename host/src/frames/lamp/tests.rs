@@ -167,6 +167,22 @@ fn gamma_and_room_light_widen_but_do_not_mislead() {
     }
 }
 
+#[test]
+fn a_saturated_patch_is_still_timed() {
+    let mut rng = ChaCha8Rng::seed_from_u64(17);
+    for _ in 0..20 {
+        let mut shot = shoot(&USUAL, &mut rng, 12.0);
+        // The lamp outshines the sensor: everything above 85 % of its light is cut off.
+        shot.frames.iter_mut().for_each(|frame| frame.brightness = frame.brightness.min(20.0 + 0.85 * 150.0));
+        let timing = time_frames(&code(), &shot.frames, &search(12.1, 0.25)).unwrap();
+        let sure = |index: &usize| timing.frames[*index].centre_u_seconds < 0.2 * FRAME;
+        let middle = (100..200).find(sure).unwrap();
+        let error = timing.frames[middle].centre_seconds - shot.clock[middle] - 0.5 * EXPOSURE;
+        let u = timing.frames[middle].centre_u_seconds;
+        assert!(error.abs() < 4e-3 && error.abs() < 3.0 * u, "{error} with a stated uncertainty of {u}");
+    }
+}
+
 fn steady(brightness: impl Fn(usize) -> f64) -> Vec<LampFrame> {
     (0..300).map(|index| LampFrame { clip_seconds: index as f64 * FRAME, brightness: brightness(index) }).collect()
 }
