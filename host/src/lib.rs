@@ -15,7 +15,6 @@ pub mod physics;
 pub mod profile;
 pub mod reduction;
 pub mod report;
-pub mod rings;
 pub mod run;
 pub mod session;
 pub mod simulation;

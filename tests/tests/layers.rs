@@ -131,3 +131,14 @@ fn the_top_level_holds_what_it_should() {
         assert!(name.starts_with('.') || allowed.contains(&name.as_str()), "{name} does not belong at the top level");
     }
 }
+
+/// `cargo run` at the top must know which of the workspace's programs is meant.
+#[test]
+fn the_first_command_of_the_readme_names_one_program() {
+    let readme = fs::read_to_string(root().join("README.md")).unwrap();
+    assert!(readme.contains("cargo run --release -- demo --out demo"));
+    let defaults = ["host", "tests", "firmware", "protocol"]
+        .into_iter()
+        .filter(|member| fs::read_to_string(root().join(member).join("Cargo.toml")).unwrap().contains("default-run ="));
+    assert_eq!(defaults.collect::<Vec<_>>(), ["host"]);
+}
