@@ -226,7 +226,7 @@ pub const TRIPS: [TripRow; 23] = [
         code: "settings-unreadable",
         detection: "the settings record in the store is damaged",
         latency_us: 0,
-        sentence: "The controller's settings are unreadable: write them again with ringvolt device settings.",
+        sentence: "The controller's settings are unreadable: write them again with ringvolt calibrate store.",
         clearing: "settings are stored",
         treat_as_live: false,
     },

@@ -35,7 +35,7 @@ pub enum LinkError {
         text: String,
     },
     /// There is nothing at that path.
-    #[error("there is no port {path}: plug the controller in, or look for its name with `ringvolt device list`")]
+    #[error("there is no port {path}: plug the controller in, and look for its name in /dev/serial/by-id")]
     Missing {
         /// The path.
         path: String,
