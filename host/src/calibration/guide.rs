@@ -16,7 +16,7 @@ const LAST_CODE: f64 = 32_700.0;
 const LONGEST_QUIET_SECONDS: u32 = 10;
 
 /// How the guide speaks with a person.
-pub trait Talk {
+pub trait Dialogue {
     /// A line that stays.
     fn say(&mut self, line: &str);
     /// A line that the next one may replace.
@@ -77,7 +77,7 @@ pub struct Guide<'a> {
     /// Reference values.
     pub reference: &'a mut dyn ReferenceSource,
     /// The person.
-    pub talk: &'a mut dyn Talk,
+    pub dialogue: &'a mut dyn Dialogue,
     /// When a point counts as settled.
     pub rules: SettlingRules,
     /// What one code of the main sense is worth by design, volts (positive), before there is a certificate.
@@ -136,7 +136,7 @@ impl Guide<'_> {
 
     fn step(&mut self, index: usize, step: &Step) -> Result<End, GuideError> {
         let total = self.session.header().steps.len();
-        self.talk.say(&format!("\nPoint {} of {total}, cycle {}. {}", index + 1, step.cycle, step.instruction()));
+        self.dialogue.say(&format!("\nPoint {} of {total}, cycle {}. {}", index + 1, step.cycle, step.instruction()));
         loop {
             let mut watched = self.watched();
             let waited = self.wait(step, &mut watched)?;
@@ -150,7 +150,7 @@ impl Guide<'_> {
             }
             // A front end may invert, so only the size of the code tells.
             let expected = f64::from(self.session.header().polarity) * watched.volts().abs();
-            match self.reference.read(self.talk, expected)? {
+            match self.reference.read(self.dialogue, expected)? {
                 Answer::Stop => return Ok(End::Stopped),
                 Answer::Again => {}
                 Answer::Skip(reason) => {
@@ -163,7 +163,7 @@ impl Guide<'_> {
                         self.session.take(index, point(step, volts, &watched))?;
                         return Ok(End::Complete);
                     }
-                    self.talk.say("  The voltage moved while the reference was read; waiting again.");
+                    self.dialogue.say("  The voltage moved while the reference was read; waiting again.");
                 }
             }
         }
@@ -182,10 +182,10 @@ impl Guide<'_> {
 
     fn back(&mut self, index: usize) -> Result<End, GuideError> {
         match index.checked_sub(1) {
-            None => self.talk.say("  This is the first point."),
+            None => self.dialogue.say("  This is the first point."),
             Some(before) => {
                 self.session.withdraw(before, "taken again")?;
-                self.talk.say(&format!("  Point {index} is taken again: first go back to where it was."));
+                self.dialogue.say(&format!("  Point {index} is taken again: first go back to where it was."));
             }
         }
         Ok(End::Complete)
@@ -215,7 +215,7 @@ impl Guide<'_> {
                 }
                 Ok(CodeEvent::Quiet) if quiet_seconds < LONGEST_QUIET_SECONDS => {
                     quiet_seconds += 1;
-                    self.talk.progress("No codes from the controller: do not assume 0 V.");
+                    self.dialogue.progress("No codes from the controller: do not assume 0 V.");
                     continue;
                 }
                 Ok(CodeEvent::Quiet) => {
@@ -246,8 +246,8 @@ impl Guide<'_> {
 
     /// Tells what is wrong with the codes; whether the person stops.
     fn trouble(&mut self, problem: &str) -> Result<bool, GuideError> {
-        self.talk.say(&format!("  {problem}"));
-        Ok(self.talk.ask("Enter waits on, q stops (nothing is lost): ")?.trim() == "q")
+        self.dialogue.say(&format!("  {problem}"));
+        Ok(self.dialogue.ask("Enter waits on, q stops (nothing is lost): ")?.trim() == "q")
     }
 
     /// What the last second means: the end of the wait, or `None` to wait on.
@@ -255,11 +255,11 @@ impl Guide<'_> {
         let volts = watched.volts();
         let drift = match watched.watch.state() {
             Settling::Waiting { seconds_left } => {
-                self.talk.progress(&format!("about {volts:.0} V, at least {seconds_left:.0} s more"));
+                self.dialogue.progress(&format!("about {volts:.0} V, at least {seconds_left:.0} s more"));
                 return Ok(None);
             }
             Settling::Moving { drift_volts, limit_volts } => {
-                self.talk.progress(&format!(
+                self.dialogue.progress(&format!(
                     "about {volts:.0} V, moving by {drift_volts:+.2} V (settled below {limit_volts:.2} V)"
                 ));
                 return Ok(None);
@@ -277,9 +277,9 @@ impl Guide<'_> {
                 self.rules.window_seconds
             ),
         };
-        self.talk.say(&format!("  {problem}"));
+        self.dialogue.say(&format!("  {problem}"));
         let answer =
-            self.talk.ask("Enter waits again, t takes it as it is, s REASON leaves this point out, q stops: ")?;
+            self.dialogue.ask("Enter waits again, t takes it as it is, s REASON leaves this point out, q stops: ")?;
         match answer.trim() {
             "q" => Ok(Some(Waited::Stop)),
             "t" => Ok(Some(Waited::AsItIs)),

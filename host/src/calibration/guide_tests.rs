@@ -166,7 +166,7 @@ impl Person {
     }
 }
 
-impl Talk for Person {
+impl Dialogue for Person {
     fn say(&mut self, line: &str) {
         self.heard.push(line.to_owned());
         if !self.obeys {
@@ -214,7 +214,7 @@ fn guided(session: &mut Session, world: &Rc<RefCell<World>>, person: &mut Person
         session,
         source: &mut WorldSource(Rc::clone(world)),
         reference: &mut Typed,
-        talk: person,
+        dialogue: person,
         rules: SettlingRules::default(),
         nominal_volts_per_code: 0.3125,
     };
@@ -329,7 +329,7 @@ fn a_controller_that_falls_silent_is_not_waited_for_without_a_word() {
         session: &mut session,
         source: &mut Mute,
         reference: &mut Typed,
-        talk: &mut person,
+        dialogue: &mut person,
         rules: SettlingRules::default(),
         nominal_volts_per_code: 0.3125,
     };

@@ -27,7 +27,7 @@ pub use assess::{Assessment, Finding, Hysteresis, Severity, assess};
 pub use certificate::{Certificate, ChannelFit, Conditions, Point, Reference, Stability};
 pub use example::example;
 pub use fit::{FTest, FitError, FitReport, Residual, TemperatureTerm, fit};
-pub use guide::{End, Guide, GuideError, Talk};
+pub use guide::{Dialogue, End, Guide, GuideError};
 pub use html::certificate_page;
 pub use issue::{IssueDetails, IssueError, issue};
 pub use plan::{Direction, PlanError, Step, plan};

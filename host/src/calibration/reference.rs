@@ -1,7 +1,7 @@
 //! Where the reference's values come from: typed by a person, or read from a meter.
 
 use super::{
-    guide::{GuideError, Talk},
+    guide::{Dialogue, GuideError},
     suspect::{ended, guess},
 };
 use crate::instrument::{Meter, Question};
@@ -27,7 +27,7 @@ pub trait ReferenceSource {
     ///
     /// # Errors
     /// When the person can no longer be asked.
-    fn read(&mut self, talk: &mut dyn Talk, expected_volts: f64) -> Result<Answer, GuideError>;
+    fn read(&mut self, dialogue: &mut dyn Dialogue, expected_volts: f64) -> Result<Answer, GuideError>;
 }
 
 /// A number of volts as people type it: `2200`, `2200.4 V`, `2200,4`, `2.2 kV`.
@@ -74,24 +74,24 @@ const HELP: &str = "  Type what the reference shows, in volts at the divider's i
                     r wait again, b take the point before again, s REASON leave this point out, q stop (nothing is lost).";
 
 impl ReferenceSource for Typed {
-    fn read(&mut self, talk: &mut dyn Talk, expected_volts: f64) -> Result<Answer, GuideError> {
+    fn read(&mut self, dialogue: &mut dyn Dialogue, expected_volts: f64) -> Result<Answer, GuideError> {
         let mut doubted = None;
         loop {
-            let line = talk.ask("Reference, volts (? for help): ")?;
+            let line = dialogue.ask("Reference, volts (? for help): ")?;
             let line = line.trim();
             match line {
                 "" => continue,
-                "?" => talk.say(HELP),
+                "?" => dialogue.say(HELP),
                 "r" => return Ok(Answer::Again),
                 "b" => return Ok(Answer::Back),
                 "q" => return Ok(Answer::Stop),
-                "s" => talk.say("  Say why, e.g. \"s supply cannot reach it\"."),
+                "s" => dialogue.say("  Say why, e.g. \"s supply cannot reach it\"."),
                 _ if line.starts_with("s ") => return Ok(Answer::Skip(line[2..].trim().to_owned())),
                 _ => match parse_typed_volts(line) {
-                    Err(problem) => talk.say(&format!("  \"{}\" {problem}.", line.escape_debug())),
+                    Err(problem) => dialogue.say(&format!("  \"{}\" {problem}.", line.escape_debug())),
                     Ok(volts) if plausible(volts, expected_volts) => return Ok(Answer::Volts(volts)),
                     Ok(volts) if plausible(1e3 * volts, expected_volts) => {
-                        talk.say(&format!(
+                        dialogue.say(&format!(
                             "  {volts} V, but the divider shows about {expected_volts:.0} V: that is in kilovolts. Type volts, or \
                              \"{volts} kV\"."
                         ));
@@ -100,7 +100,7 @@ impl ReferenceSource for Typed {
                     Ok(volts) => {
                         doubted = Some(volts);
                         let why = ended(guess(volts, expected_volts));
-                        talk.say(&format!(
+                        dialogue.say(&format!(
                             "  {volts} V, but the divider shows about {expected_volts:.0} V{why} Type it right, or the same \
                              once more if it is right."
                         ));
@@ -138,7 +138,7 @@ impl Metered {
 }
 
 impl ReferenceSource for Metered {
-    fn read(&mut self, talk: &mut dyn Talk, expected_volts: f64) -> Result<Answer, GuideError> {
+    fn read(&mut self, dialogue: &mut dyn Dialogue, expected_volts: f64) -> Result<Answer, GuideError> {
         loop {
             let problem = match self.mean_volts() {
                 Ok(volts) if plausible(volts, expected_volts) => return Ok(Answer::Volts(volts)),
@@ -148,8 +148,8 @@ impl ReferenceSource for Metered {
                 ),
                 Err(error) => error.to_string(),
             };
-            talk.say(&format!("  {problem}"));
-            match talk
+            dialogue.say(&format!("  {problem}"));
+            match dialogue
                 .ask("Enter asks the meter again, s REASON leaves this point out, q stops (nothing is lost): ")?
                 .trim()
             {

@@ -185,7 +185,7 @@ fn guide(
 ) -> Result<(), Failure> {
     let mut reference = open_reference(meter)?;
     let rules = rules(settling)?;
-    let mut talk = Terminal::new();
+    let mut dialogue = Terminal::new();
     println!("{CAUTION}");
     if session.header().simulated {
         println!("SIMULATED: the codes come from an invented bench.");
@@ -194,7 +194,7 @@ fn guide(
         session: &mut session,
         source: source.as_mut(),
         reference: reference.as_mut(),
-        talk: &mut talk,
+        dialogue: &mut dialogue,
         rules,
         nominal_volts_per_code: profile.divider.nominal_volts_per_code,
     }

@@ -2,7 +2,7 @@
 
 use std::io::{self, BufRead, IsTerminal, Write};
 
-use crate::calibration::{GuideError, Talk};
+use crate::calibration::{Dialogue, GuideError};
 
 /// Speaks on standard output, listens on standard input.
 pub(super) struct Terminal {
@@ -24,7 +24,7 @@ impl Terminal {
     }
 }
 
-impl Talk for Terminal {
+impl Dialogue for Terminal {
     fn say(&mut self, line: &str) {
         self.put(&format!("{line}\n"));
     }
