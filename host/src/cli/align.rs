@@ -45,7 +45,7 @@ pub struct Args {
     pub patch: Option<Patch>,
     /// For `lamp`: time a rolling shutter takes from one row to the next, microseconds (10 to 30 are common); 0 for a
     /// global shutter.
-    #[arg(long, value_name = "MICROSECONDS", default_value_t = 0.0)]
+    #[arg(long, value_name = "MICROSECONDS", default_value_t = 0.0, allow_negative_numbers = true)]
     pub row_us: f64,
     /// For `lamp`: a Y4M video instead of the run's frames; `-` is standard input.
     #[arg(long, value_name = "FILE")]
@@ -54,7 +54,7 @@ pub struct Args {
     #[arg(long, value_name = "FILE")]
     pub times: Option<PathBuf>,
     /// For `strobe` and `lamp`: how far the camera's clock may be off, seconds.
-    #[arg(long, value_name = "SECONDS", default_value_t = 15.0)]
+    #[arg(long, value_name = "SECONDS", default_value_t = 15.0, allow_negative_numbers = true)]
     pub within: f64,
     /// For `lamp` with a video: when the clip began, RFC 3339; the middle of the lamp's run if not given.
     #[arg(long, value_name = "TIME")]
