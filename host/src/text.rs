@@ -71,6 +71,11 @@ pub fn line_of(text: &str, path: &str) -> Option<usize> {
     Some(line_at(text, value.span().start))
 }
 
+/// Bytes as lower-case hexadecimal, two digits each: how identities and hashes are written everywhere.
+pub fn hex(bytes: &[u8]) -> String {
+    bytes.iter().map(|byte| format!("{byte:02x}")).collect()
+}
+
 /// A time as RFC 3339 in UTC with nine decimals and `Z`; the nearest representable one where it lies beyond the calendar.
 pub fn utc(utc_ns: i64) -> String {
     // 64 bits of nanoseconds reach from 1677 to 2262, which the calendar holds.
@@ -80,6 +85,12 @@ pub fn utc(utc_ns: i64) -> String {
 
 #[cfg(test)]
 mod time_tests {
+    #[test]
+    fn bytes_are_two_lower_case_digits_each() {
+        assert_eq!(super::hex(&[0x00, 0x5e, 0xff]), "005eff");
+        assert_eq!(super::hex(&[]), "");
+    }
+
     #[test]
     fn times_have_nine_decimals_and_a_z() {
         assert_eq!(super::utc(0), "1970-01-01T00:00:00.000000000Z");

@@ -1,6 +1,6 @@
 //! Certificates as files: canonical text, hash, and reading back what someone may have edited.
 
-use std::{fmt::Write as _, path::Path};
+use std::path::Path;
 
 use ringvolt_protocol::CertificateHash;
 use sha2::{Digest, Sha256};
@@ -117,11 +117,7 @@ impl Certificate {
     /// `sed 's/^hash = .*/hash = ""/' certificate.toml | sha256sum`.
     pub fn content_hash(&self) -> String {
         let unsealed = Self { hash: String::new(), ..self.clone() };
-        let digest = Sha256::digest(unsealed.to_toml().as_bytes());
-        digest.iter().fold(String::with_capacity(64), |mut hex, byte| {
-            let _ = write!(hex, "{byte:02x}");
-            hex
-        })
+        text::hex(&Sha256::digest(unsealed.to_toml().as_bytes()))
     }
 
     /// Sets the hash to that of the content.

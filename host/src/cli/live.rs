@@ -6,8 +6,8 @@ use serde_json::{Value, json};
 
 use crate::{
     run::rows::{FrameRow, StampRow},
-    session::{Now, Observer, Update, hex},
-    text::utc,
+    session::{Now, Observer, Update},
+    text::{hex, utc},
     words::event_words,
 };
 

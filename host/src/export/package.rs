@@ -45,7 +45,7 @@ fn size_and_hash(path: &Path) -> io::Result<(u64, String)> {
             }
         }
     }
-    Ok((bytes, hasher.finalize().iter().map(|byte| format!("{byte:02x}")).collect()))
+    Ok((bytes, crate::text::hex(&hasher.finalize())))
 }
 
 fn schema(table: &Table) -> Value {

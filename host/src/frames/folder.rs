@@ -19,7 +19,7 @@ use sha2::{Digest, Sha256};
 use thiserror::Error;
 
 use super::{exposure_of, picture};
-use crate::{clock::Clock, profile::Camera, run::rows::FrameRow};
+use crate::{clock::Clock, profile::Camera, run::rows::FrameRow, text::hex};
 
 /// A file that is still damaged after so long without a change is damaged for good.
 const WRITING_NS: i64 = 1_500_000_000;
@@ -111,7 +111,7 @@ impl FrameFolder {
             Err(error) => Err(error.to_string()),
         };
         self.seen.insert(name, Seen::Taken);
-        let sha256 = Sha256::digest(&bytes).iter().map(|byte| format!("{byte:02x}")).collect();
+        let sha256 = hex(&Sha256::digest(&bytes));
         Some(FrameRow { frame: self.name(&file), file, noticed_utc_ns: utc_ns, sha256, exposure })
     }
 

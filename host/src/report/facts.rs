@@ -85,7 +85,7 @@ impl Facts {
             run_name: reader.path().file_name().map(|name| name.to_string_lossy().into_owned()).unwrap_or_default(),
             clock_bound_ms: None,
             fingerprint: reader.fingerprint()?,
-            profile_hash: profile_hash.iter().map(|byte| format!("{byte:02x}")).collect(),
+            profile_hash: crate::text::hex(&profile_hash),
             notes: reader.notes()?,
             completeness: completeness(reader),
             header,

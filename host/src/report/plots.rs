@@ -1,6 +1,8 @@
 //! Plots as SVG.
 
-use plotters::prelude::*;
+use std::ops::Range;
+
+use plotters::{coord::Shift, prelude::*};
 
 use super::ReportError;
 
@@ -78,25 +80,7 @@ pub(super) fn voltage(
     let mut svg = String::new();
     {
         let root = SVGBackend::with_string(&mut svg, WIDE).into_drawing_area();
-        let mut chart = ChartBuilder::on(&root)
-            .margin(24)
-            .x_label_area_size(80)
-            .y_label_area_size(140)
-            .build_cartesian_2d(x0..x1, y0..y1)
-            .map_err(failed)?;
-        chart
-            .configure_mesh()
-            .x_desc("time from the first reading, s")
-            .y_desc("accelerating voltage, V")
-            .x_label_formatter(&plain)
-            .y_label_formatter(&plain)
-            .label_style(("sans-serif", 30, &INK))
-            .axis_desc_style(("sans-serif", 32, &INK))
-            .light_line_style(WHITE)
-            .bold_line_style(GRID.stroke_width(2))
-            .axis_style(INK.stroke_width(2))
-            .draw()
-            .map_err(failed)?;
+        let mut chart = axes(&root, x0..x1, y0..y1, ["time from the first reading, s", "accelerating voltage, V"])?;
         let thick = (y1 - y0) * 0.003;
         let columns = spans.iter().map(|span| {
             Rectangle::new([(span.from_s, span.lowest - thick), (span.until_s, span.highest + thick)], BAND.filled())
@@ -120,6 +104,35 @@ type Chart<'a, 'b> = ChartContext<
     Cartesian2d<plotters::coord::types::RangedCoordf64, plotters::coord::types::RangedCoordf64>,
 >;
 
+/// The frame both plots share, with what its two axes show.
+fn axes<'a, 'b>(
+    root: &'a DrawingArea<SVGBackend<'b>, Shift>,
+    x: Range<f64>,
+    y: Range<f64>,
+    [x_desc, y_desc]: [&str; 2],
+) -> Result<Chart<'a, 'b>, ReportError> {
+    let mut chart = ChartBuilder::on(root)
+        .margin(24)
+        .x_label_area_size(80)
+        .y_label_area_size(140)
+        .build_cartesian_2d(x, y)
+        .map_err(failed)?;
+    chart
+        .configure_mesh()
+        .x_desc(x_desc)
+        .y_desc(y_desc)
+        .x_label_formatter(&plain)
+        .y_label_formatter(&plain)
+        .label_style(("sans-serif", 30, &INK))
+        .axis_desc_style(("sans-serif", 32, &INK))
+        .light_line_style(WHITE)
+        .bold_line_style(GRID.stroke_width(2))
+        .axis_style(INK.stroke_width(2))
+        .draw()
+        .map_err(failed)?;
+    Ok(chart)
+}
+
 /// Good frames are circles, doubtful ones triangles: shape tells them apart without colour.
 fn draw_dots(chart: &mut Chart<'_, '_>, dots: &[Dot]) -> Result<(), ReportError> {
     let good = dots.iter().filter(|dot| dot.good).map(|dot| Circle::new((dot.x, dot.y), 7, GOOD.filled()));
@@ -137,25 +150,7 @@ pub(super) fn wavelength(dots: &[Dot], curve: &[(f64, f64)], description: &str) 
     let mut svg = String::new();
     {
         let root = SVGBackend::with_string(&mut svg, WIDE).into_drawing_area();
-        let mut chart = ChartBuilder::on(&root)
-            .margin(24)
-            .x_label_area_size(80)
-            .y_label_area_size(140)
-            .build_cartesian_2d(x0..x1, y0..y1)
-            .map_err(failed)?;
-        chart
-            .configure_mesh()
-            .x_desc("accelerating voltage, V")
-            .y_desc("electron wavelength, pm")
-            .x_label_formatter(&plain)
-            .y_label_formatter(&plain)
-            .label_style(("sans-serif", 30, &INK))
-            .axis_desc_style(("sans-serif", 32, &INK))
-            .light_line_style(WHITE)
-            .bold_line_style(GRID.stroke_width(2))
-            .axis_style(INK.stroke_width(2))
-            .draw()
-            .map_err(failed)?;
+        let mut chart = axes(&root, x0..x1, y0..y1, ["accelerating voltage, V", "electron wavelength, pm"])?;
         chart.draw_series(LineSeries::new(curve.iter().copied(), BAND.stroke_width(4))).map_err(failed)?;
         draw_dots(&mut chart, dots)?;
         root.present().map_err(failed)?;

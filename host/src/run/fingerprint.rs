@@ -27,6 +27,6 @@ impl RunReader {
             add(hello);
             add(&heard_utc_ns.to_string());
         }
-        Ok(hasher.finalize().iter().map(|byte| format!("{byte:02x}")).collect())
+        Ok(crate::text::hex(&hasher.finalize()))
     }
 }

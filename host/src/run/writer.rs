@@ -20,6 +20,7 @@ use super::{
     rows::{EchoRow, EpochRow, FrameRow, NoteRow, Record, StampRow},
     schema::{self, SEQ_BITS},
 };
+use crate::text::hex;
 
 /// What is known when a run begins.
 #[derive(Clone, Debug, Default, PartialEq)]
@@ -423,8 +424,4 @@ fn signed(time_us: u64) -> i64 {
 fn json(value: &impl Serialize) -> String {
     // Plain structs of numbers and names: serialising them cannot fail.
     serde_json::to_string(value).unwrap_or_default()
-}
-
-fn hex(bytes: &[u8]) -> String {
-    bytes.iter().map(|byte| format!("{byte:02x}")).collect()
 }

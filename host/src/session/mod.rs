@@ -10,6 +10,6 @@ mod update;
 
 pub use lockstep::LockstepPace;
 pub use pace::{Pace, RealPace};
-pub use recorder::{Recorded, SessionError, SessionParts, hex, record};
+pub use recorder::{Recorded, SessionError, SessionParts, record};
 pub use store::Store;
 pub use update::{Now, Observer, Update};

@@ -23,6 +23,7 @@ use crate::{
         RunError,
         rows::{FrameRow, Record},
     },
+    text::hex,
 };
 
 const MS: i64 = 1_000_000;
@@ -463,9 +464,4 @@ impl Session<'_> {
         }
         Ok(())
     }
-}
-
-/// Eight bytes as sixteen hexadecimal digits.
-pub fn hex(bytes: &[u8]) -> String {
-    bytes.iter().map(|byte| format!("{byte:02x}")).collect()
 }

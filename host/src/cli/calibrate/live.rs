@@ -133,7 +133,7 @@ fn refusal(why: Refusal) -> &'static str {
 
 /// Sixteen hexadecimal digits.
 pub(super) fn device_text(hello: &Hello) -> String {
-    hello.device.iter().map(|byte| format!("{byte:02x}")).collect()
+    crate::text::hex(&hello.device)
 }
 
 enum Delivered {

@@ -94,5 +94,5 @@ fn hash(path: &Path) -> io::Result<String> {
             count => hasher.update(&piece[..count]),
         }
     }
-    Ok(hasher.finalize().iter().map(|byte| format!("{byte:02x}")).collect())
+    Ok(crate::text::hex(&hasher.finalize()))
 }
