@@ -17,7 +17,7 @@ use crate::{
     frames::{
         exposure_of,
         lamp::{LampCode, LampFrame, LampSearch, TimedFrame, time_frames},
-        read_picture, strobe, table,
+        modified_utc_ns, read_picture, strobe, table,
         video::{Patch, patch_brightness, patch_of_picture},
     },
     profile::{Camera, Profile, TimeSource},
@@ -114,16 +114,10 @@ fn from_files(reader: &RunReader, profile: &Profile, source: TimeSource) -> Resu
     let again = |frame: FrameRow| {
         let path = folder.join(&frame.file);
         let read = std::fs::read(&path).map_err(|error| format!("{} could not be read ({error})", path.display()));
-        let exposure = read.and_then(|bytes| exposure_of(&bytes, modified_utc_ns(&path), &camera));
+        let exposure = read.and_then(|bytes| exposure_of(&bytes, modified_utc_ns(&path).unwrap_or(0), &camera));
         FrameRow { exposure, ..frame }
     };
     Ok(job(reader.frames())?.into_iter().map(again).collect())
-}
-
-fn modified_utc_ns(path: &Path) -> i64 {
-    let modified = std::fs::metadata(path).and_then(|data| data.modified()).ok();
-    let since = modified.and_then(|time| time.duration_since(std::time::UNIX_EPOCH).ok());
-    since.and_then(|since| i64::try_from(since.as_nanos()).ok()).unwrap_or(0)
 }
 
 fn from_table(args: &Args, reader: &RunReader, camera: &Camera) -> Result<Vec<FrameRow>, Failure> {

@@ -21,7 +21,7 @@ pub struct Bench {
 /// able to run in order to be calibrated: every frame is then refused as uncalibrated. One that is damaged is an error.
 pub fn load(path: &Path) -> Result<Bench, Failure> {
     let profile_text = crate::text::read(path, crate::profile::MAX_PROFILE_BYTES).map_err(Failure::usage)?;
-    let profile = Profile::load(path).map_err(Failure::usage)?;
+    let profile = Profile::parse(&profile_text, &path.display().to_string()).map_err(Failure::usage)?;
     let file = &profile.calibration.certificate;
     if !file.exists() {
         return Ok(Bench { profile, profile_text, certificate: None, certificate_text: None });

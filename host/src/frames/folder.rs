@@ -134,7 +134,8 @@ impl FrameFolder {
     }
 }
 
-fn modified_utc_ns(path: &Path) -> Option<i64> {
+/// When a file was last changed, UTC nanoseconds; `None` where the system does not tell.
+pub fn modified_utc_ns(path: &Path) -> Option<i64> {
     let modified = fs::metadata(path).ok()?.modified().ok()?;
     i64::try_from(modified.duration_since(UNIX_EPOCH).ok()?.as_nanos()).ok()
 }

@@ -10,5 +10,5 @@ pub mod table;
 pub mod video;
 
 pub use exposure::{exposure_of, shutter_seconds};
-pub use folder::{FolderError, FrameFolder, watch};
+pub use folder::{FolderError, FrameFolder, modified_utc_ns, watch};
 pub use picture::{Picture, PictureError, read_picture};
