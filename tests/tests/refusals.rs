@@ -179,11 +179,11 @@ fn a_full_disk_ends_the_run_with_everything_before_it() {
     let (_running, link) = simulated(&bench);
     let disk = bench.folder.path().join("disk");
     fs::create_dir(&disk).unwrap();
-    // A disk of 400 KiB: a mount where that is allowed, otherwise a limit on the size of files.
-    let mounted = Command::new("mount").args(["-t", "tmpfs", "-o", "size=400k", "none"]).arg(&disk).status();
+    // A disk of 800 KiB: a mount where that is allowed, otherwise a limit on the size of files.
+    let mounted = Command::new("mount").args(["-t", "tmpfs", "-o", "size=800k", "none"]).arg(&disk).status();
     let is_mounted = mounted.is_ok_and(|status| status.success());
     println!("info: small disk by {}", if is_mounted { "mount" } else { "file size limit" });
-    let limit = if is_mounted { "unlimited" } else { "300" };
+    let limit = if is_mounted { "unlimited" } else { "600" };
     let script = format!("trap '' XFSZ; ulimit -f {limit}; exec \"$@\"");
     let out = disk.join("run.ringvolt");
     let output = Command::new("bash")
@@ -208,6 +208,6 @@ fn a_full_disk_ends_the_run_with_everything_before_it() {
     let reader = RunReader::open(&copy).unwrap();
     assert_eq!(reader.integrity().unwrap(), Vec::<String>::new());
     let (count, missing) = reader.count_readings(1).unwrap();
-    println!("measured: {count} readings on a disk of 400 KiB");
+    println!("measured: {count} readings on a disk of 800 KiB");
     assert!(count > 300 && missing == 0, "{count} readings, {missing} missing");
 }
